@@ -1,0 +1,1 @@
+"""Space: where heads, targets, coils and poses are. No clock, no limits, no device."""

@@ -1,0 +1,225 @@
+"""How near a casing comes to scalp and keep-outs, exactly: by branch and bound on convex distances.
+
+The distance to a convex solid is convex and 1-Lipschitz, so over a triangle it lies between its tangent plane at the
+triangle's middle and its values at the corners. Triangles whose lower bound is above the best value are dropped, the
+others are split in four. Millimetres; triangles in the coil frame.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+
+from .errors import InputError
+from .frames import FloatArray, IntArray, invert_rigid, transform_points
+from .solids import Solid
+from .surface import Surface
+from .triangles import dot
+
+# How far a reported distance may be above the true one, mm.
+DISTANCE_TOLERANCE_MM: Final = 1e-6
+_SQRT3: Final = 3**0.5
+_MOST_ROUNDS: Final = 60
+# Pose-vertex pairs at once.
+_PAIRS_AT_ONCE: Final = 2_000_000
+
+
+@dataclass(frozen=True)
+class Obstacle:
+    """Something that a casing keeps away from: all points within `radius_mm` of some triangles.
+
+    A mesh has radius 0; a ball is one point three times over; a capsule is a segment.
+
+    Attributes
+    ----------
+    name : str
+    triangles : ndarray, shape (M, 3, 3)
+        Head frame, mm.
+    radius_mm : float
+    keep_mm : float
+        The distance to keep from it.
+    """
+
+    name: str
+    triangles: FloatArray
+    radius_mm: float
+    keep_mm: float
+
+    @classmethod
+    def ball(cls, name: str, centre_mm: FloatArray, radius_mm: float, keep_mm: float) -> Obstacle:
+        """Return a spherical keep-out."""
+        return cls(name, np.tile(np.asarray(centre_mm, dtype=np.float64), (1, 3, 1)), radius_mm, keep_mm)
+
+
+def least_distance(
+    solids: tuple[Solid, ...], triangles: FloatArray, owner: IntArray, count: int, *, above: float = np.inf
+) -> FloatArray:
+    """Return for each of `count` owners the least signed distance of its triangles to the solids.
+
+    Parameters
+    ----------
+    solids : tuple of Solid
+    triangles : ndarray, shape (K, 3, 3)
+        In the solids' frame.
+    owner : ndarray of int, shape (K,)
+        Which pose each triangle belongs to.
+    count : int
+    above : float
+        Distances above this need not be found; `inf` comes back where there is nothing nearer.
+
+    Returns
+    -------
+    ndarray, shape (count,)
+        Never below the true distance, above it by at most 1e-6 mm. Negative where a triangle enters a solid (then it
+        is the depth of the deepest point found, good to 1e-6 mm as well).
+    """
+    best = np.full(count, above)
+    pending: list[tuple[Solid, FloatArray, IntArray]] = []
+    for solid in solids:
+        at_corners = solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1)
+        np.minimum.at(best, owner, at_corners)
+        pending.append((solid, at_corners, np.arange(len(triangles))))
+    sides = triangles - triangles[:, [1, 2, 0]]
+    slack = np.sqrt(dot(sides, sides).max(axis=1)) / _SQRT3
+    for solid, at_corners, _ in pending:
+        keep = at_corners - slack < best[owner]
+        _refine(solid, triangles[keep], owner[keep], best)
+    best[best >= above] = np.inf
+    return best
+
+
+def _refine(solid: Solid, triangles: FloatArray, owner: IntArray, best: FloatArray) -> None:
+    """Lower `best` to the least distance of the triangles to one solid."""
+    for _ in range(_MOST_ROUNDS):
+        if not len(triangles):
+            return
+        middle = triangles.mean(axis=1)
+        value, slope = solid.distance_and_gradient(middle)
+        np.minimum.at(best, owner, value)
+        lowest = value + dot(slope[:, None], triangles - middle[:, None]).min(axis=1)
+        keep = lowest < best[owner] - DISTANCE_TOLERANCE_MM
+        triangles, owner = _split(triangles[keep]), np.tile(owner[keep], 4)
+        np.minimum.at(best, owner, solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1))
+    raise ArithmeticError("a distance did not converge")  # bounds close by a factor of two at least each round
+
+
+def _split(triangles: FloatArray) -> FloatArray:
+    """Split each triangle in four at the middles of its sides."""
+    a, b, c = triangles[:, 0], triangles[:, 1], triangles[:, 2]
+    ab, bc, ca = (a + b) / 2, (b + c) / 2, (c + a) / 2
+    parts = [(a, ab, ca), (ab, b, bc), (ca, bc, c), (ab, bc, ca)]
+    return np.concatenate([np.stack(part, axis=1) for part in parts])
+
+
+def clearances(
+    head_from_coil: FloatArray, solids: tuple[Solid, ...], obstacle: Obstacle, *, above: float = np.inf
+) -> FloatArray:
+    """Return for each pose (N,) the distance of casing and handle to an obstacle, mm; negative inside.
+
+    Parameters
+    ----------
+    head_from_coil : ndarray, shape (N, 4, 4)
+    solids : tuple of Solid
+    obstacle : Obstacle
+    above : float
+        Distances above this come back as `inf`.
+    """
+    result = np.empty(len(head_from_coil))
+    step = max(1, _PAIRS_AT_ONCE // max(1, len(obstacle.triangles) * 3))
+    for start in range(0, len(result), step):
+        poses = head_from_coil[start : start + step]
+        triangles, owner = _in_coil_frame(poses, solids, obstacle, above)
+        found = least_distance(solids, triangles, owner, len(poses), above=above + obstacle.radius_mm)
+        result[start : start + step] = found - obstacle.radius_mm
+    return result
+
+
+def _in_coil_frame(
+    poses: FloatArray, solids: tuple[Solid, ...], obstacle: Obstacle, above: float
+) -> tuple[FloatArray, IntArray]:
+    """The obstacle's triangles in each pose's coil frame, those that a bounding ball rules out left out."""
+    coil_from_head = invert_rigid(poses)
+    local = transform_points(coil_from_head[:, None], obstacle.triangles.reshape(1, -1, 3))
+    local = local.reshape(len(poses), -1, 3, 3)
+    near = np.ones(local.shape[:2], dtype=bool)
+    if np.isfinite(above):
+        middle = local.mean(axis=2)
+        size = np.sqrt(((local - middle[:, :, None]) ** 2).sum(axis=3).max(axis=2))
+        near = np.zeros_like(near)
+        for solid in solids:
+            centre, radius = solid.bounds
+            gap = np.sqrt(((middle - centre) ** 2).sum(axis=2)) - size - radius
+            near |= gap < above + obstacle.radius_mm
+    owner = np.broadcast_to(np.arange(len(poses))[:, None], near.shape)[near]
+    return local[near], owner
+
+
+@dataclass(frozen=True)
+class Lifted:
+    """Poses after lifting.
+
+    Attributes
+    ----------
+    head_from_coil : ndarray, shape (N, 4, 4)
+    lift_mm : ndarray, shape (N,)
+    clearance_mm : ndarray, shape (N,)
+        Of casing and handle to the scalp, after the lift.
+    """
+
+    head_from_coil: FloatArray
+    lift_mm: FloatArray
+    clearance_mm: FloatArray
+
+
+def lift_clear(
+    head_from_coil: FloatArray, solids: tuple[Solid, ...], scalp: Surface, *, standoff_mm: float, lift_most_mm: float
+) -> Lifted:
+    """Lift each pose along -z by the least amount that keeps every point of the casing `standoff_mm` from the scalp.
+
+    The clearance changes by at most the lift, so lifting by what is missing never passes the first height that is
+    enough: conservative advancement (Mirtich 1996), here to `DISTANCE_TOLERANCE_MM`.
+
+    Parameters
+    ----------
+    head_from_coil : ndarray, shape (N, 4, 4)
+    solids : tuple of Solid
+    scalp : Surface
+    standoff_mm, lift_most_mm : float
+        A pose that needs more than `lift_most_mm` is returned at that height, with a clearance below the standoff.
+    """
+    obstacle = Obstacle("scalp", scalp.triangles, 0.0, standoff_mm)
+    poses, lift = head_from_coil.copy(), np.zeros(len(head_from_coil))
+    clearance = np.full(len(poses), np.inf)
+    # Beyond the lowest standing pose nothing nearer than this can decide: the face's centre starts at the standoff.
+    above = standoff_mm + 2 * lift_most_mm + 10.0
+    pending = np.arange(len(poses))
+    while pending.size:
+        clearance[pending] = clearances(poses[pending], solids, obstacle, above=above)
+        missing = standoff_mm - clearance[pending]
+        go_on = (missing > DISTANCE_TOLERANCE_MM) & (lift[pending] < lift_most_mm)
+        step = np.minimum(missing[go_on], lift_most_mm - lift[pending[go_on]])
+        pending = pending[go_on]
+        # A step shorter than this cannot be told from rounding; it also bounds the number of rounds.
+        step = np.maximum(step, np.minimum(DISTANCE_TOLERANCE_MM, lift_most_mm - lift[pending]))
+        lift[pending] += step
+        poses[pending, :3, 3] = head_from_coil[pending, :3, 3] - lift[pending, None] * head_from_coil[pending, :3, 2]
+    inside = _inside(poses, solids, scalp)
+    clearance[inside] = np.minimum(clearance[inside], -scalp.nearest(poses[inside, :3, 3]).distance)
+    return Lifted(poses, lift, clearance)
+
+
+def _inside(poses: FloatArray, solids: tuple[Solid, ...], scalp: Surface) -> IntArray:
+    """Poses whose casing has a solid's centre inside the head: it may lie there without touching the surface."""
+    centres = np.array([solid.bounds[0] for solid in solids])
+    where = transform_points(poses[:, None], centres[None]).reshape(-1, 3)
+    signed = scalp.signed_distance(where).reshape(len(poses), -1) if len(poses) else np.empty((0, 1))
+    return np.flatnonzero((signed < 0).any(axis=1))
+
+
+def check_keep_outs(names: list[str]) -> None:
+    """Refuse keep-outs of one name: a reason must say which one it means."""
+    twice = sorted({name for name in names if names.count(name) > 1})
+    if twice:
+        raise InputError(*(f"keep-out {name!r} is there twice; give each its own name" for name in twice))

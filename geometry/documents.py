@@ -1,0 +1,333 @@
+"""YAML files in which every value knows its line and column, and the models they are held against.
+
+A file is read once, as bytes; what is hashed is what was parsed. Nothing is guessed: a duplicate key, a tab, an alias,
+a sexagesimal (``1:30``), an octal (``010``) and a number that is not finite are refused, all with their place.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+import re
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
+from typing import Annotated, Any, Final, TypeAlias, TypeVar
+
+import yaml
+from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError, WithJsonSchema
+
+from .errors import InputError, did_you_mean
+
+Key: TypeAlias = "str | int"
+Path: TypeAlias = "tuple[Key, ...]"
+Place: TypeAlias = "tuple[int, int]"
+
+DEEPEST_NESTING: Final = 40
+_SEXAGESIMAL: Final = re.compile(r"[-+]?[0-9][0-9_]*(:[0-5]?[0-9])+(\.[0-9_]*)?")
+_OCTAL: Final = re.compile(r"[-+]?0[0-7_]+")
+_ALMOST_NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)[eE][-+]?\d+")
+
+
+class Model(BaseModel):
+    """A part of a file: unknown keys, wrong types and numbers that are not finite are refused; values are frozen."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=True, allow_inf_nan=False)
+
+
+AnyModel = TypeVar("AnyModel", bound=Model)
+
+
+@dataclass(frozen=True)
+class Document:
+    """A parsed file.
+
+    Attributes
+    ----------
+    name : str
+        The path as messages show it.
+    value : dict
+        Plain Python values.
+    places : mapping from path to (line, column)
+        Both from 1; a path is the tuple of keys and indices that leads to a value.
+    raw : mapping from path to str
+        Scalars as they were typed.
+    """
+
+    name: str
+    value: dict[str, Any]
+    places: Mapping[Path, Place]
+    raw: Mapping[Path, str] = field(default_factory=dict)
+
+    def at(self, path: Path) -> str:
+        """Return ``name:line:column: dotted.path`` of a value, or of the nearest thing around it that exists."""
+        known = path
+        while known and known not in self.places:
+            known = known[:-1]
+        line, column = self.places.get(known, (1, 1))
+        where = f"{self.name}:{line}:{column}"
+        return f"{where}: {dotted(path)}" if path else where
+
+
+def dotted(path: Path) -> str:
+    """Return ``targets[0].at_mm`` for ``("targets", 0, "at_mm")``.
+
+    Examples
+    --------
+    >>> dotted(("targets", 0, "at_mm"))
+    'targets[0].at_mm'
+    """
+    text = ""
+    for key in path:
+        text += f"[{key}]" if isinstance(key, int) else f".{key}" if text else str(key)
+    return text
+
+
+def read_yaml(data: bytes, name: str) -> Document:
+    """Parse one YAML mapping with the place of every value.
+
+    Parameters
+    ----------
+    data : bytes
+        The file.
+    name : str
+        Its path, for messages.
+
+    Raises
+    ------
+    InputError
+        One line for each thing that is wrong.
+
+    Examples
+    --------
+    >>> read_yaml(b"coil: [1, 2]", "a.yaml").at(("coil", 1))
+    'a.yaml:1:11: coil[1]'
+    """
+    try:
+        text = data.decode("utf-8")
+    except UnicodeDecodeError as error:
+        raise InputError(f"{name}:1:1: not UTF-8 text (byte {error.start}); save the file as UTF-8") from None
+    root = _compose(text, name)
+    if not isinstance(root, yaml.MappingNode):
+        raise InputError(f"{name}:1:1: expected keys and values (`key: value`), got something else or nothing")
+    builder = _Builder(name)
+    value = builder.build(root, ())
+    if builder.problems:
+        raise InputError(*builder.problems)
+    return Document(name, value, builder.places, builder.raw)
+
+
+def _compose(text: str, name: str) -> yaml.Node | None:
+    problem = next(_forbidden_events(text, name), None)
+    if problem:
+        raise InputError(problem)
+    try:
+        return yaml.compose(text, Loader=yaml.SafeLoader)
+    except yaml.YAMLError as error:  # two documents in one file
+        raise InputError(_yaml_problem(error, name)) from None
+
+
+def _forbidden_events(text: str, name: str) -> Iterator[str]:
+    depth = 0
+    try:
+        for event in yaml.parse(text, Loader=yaml.SafeLoader):
+            mark = event.start_mark
+            where = f"{name}:{mark.line + 1}:{mark.column + 1}" if mark else name
+            if isinstance(event, yaml.AliasEvent):
+                yield f"{where}: an alias (*{event.anchor}) is not used here; write the value out"
+            depth += isinstance(event, yaml.CollectionStartEvent) - isinstance(event, yaml.CollectionEndEvent)
+            if depth > DEEPEST_NESTING:
+                yield f"{where}: nested deeper than {DEEPEST_NESTING} levels; no file of this kind needs that"
+                return
+    except yaml.YAMLError as error:
+        yield _yaml_problem(error, name)
+
+
+def _yaml_problem(error: yaml.YAMLError, name: str) -> str:
+    mark = getattr(error, "problem_mark", None)
+    what = str(getattr(error, "problem", None) or getattr(error, "reason", None) or error)
+    if "'\\t'" in what:
+        what = "a tab where YAML wants spaces; indent with spaces"
+    where = f"{name}:{mark.line + 1}:{mark.column + 1}" if mark else f"{name}:1:1"
+    return f"{where}: {what}"
+
+
+class _Builder:
+    """Turns nodes into values, keeps their places, collects everything that is wrong."""
+
+    def __init__(self, name: str) -> None:
+        self.name = name
+        self.places: dict[Path, Place] = {}
+        self.raw: dict[Path, str] = {}
+        self.problems: list[str] = []
+
+    def build(self, node: yaml.Node, path: Path) -> Any:
+        self.places[path] = (node.start_mark.line + 1, node.start_mark.column + 1)
+        if isinstance(node, yaml.MappingNode):
+            return self._mapping(node, path)
+        if isinstance(node, yaml.SequenceNode):
+            return [self.build(child, (*path, i)) for i, child in enumerate(node.value)]
+        return self._scalar(node, path)
+
+    def _mapping(self, node: yaml.MappingNode, path: Path) -> dict[str, Any]:
+        result: dict[str, Any] = {}
+        for key_node, child in node.value:
+            mark = key_node.start_mark
+            where = f"{self.name}:{mark.line + 1}:{mark.column + 1}"
+            if not isinstance(key_node, yaml.ScalarNode):
+                self.problems.append(f"{where}: expected a word as key")
+                continue
+            key = key_node.value
+            if key in result:
+                self.problems.append(f"{where}: {dotted((*path, key))}: this key stands here twice; keep one")
+                continue
+            result[key] = self.build(child, (*path, key))
+            self.places[(*path, key)] = (mark.line + 1, mark.column + 1)
+        return result
+
+    def _scalar(self, node: yaml.Node, path: Path) -> Any:
+        text, kind = str(node.value), node.tag.rpartition(":")[2]
+        self.raw[path] = text
+        where = f"{self.name}:{node.start_mark.line + 1}:{node.start_mark.column + 1}: {dotted(path)}"
+        if kind in ("int", "float"):
+            return self._number(text, kind, where)
+        if kind == "bool":
+            return text.lower() in ("yes", "true", "on")
+        if kind == "null":
+            return None
+        if kind not in ("str", "timestamp"):
+            self.problems.append(f"{where}: the tag {node.tag!r} is not used here; write a plain value")
+        return text
+
+    def _number(self, text: str, kind: str, where: str) -> Any:
+        if _SEXAGESIMAL.fullmatch(text):
+            self.problems.append(f"{where}: {text} is a base-60 number to YAML; write plain seconds, or quote text")
+            return None
+        if _OCTAL.fullmatch(text):
+            self.problems.append(f"{where}: {text} is an octal number to YAML; take out the leading zero, or quote text")
+            return None
+        try:
+            value = yaml.safe_load(text)
+        except ValueError:
+            value = math.inf
+        if not math.isfinite(value) or abs(value) > 1e300:
+            self.problems.append(f"{where}: expected a finite number, got {text[:40]}")
+            return None
+        return int(value) if kind == "int" else float(value)
+
+
+def validate(document: Document, model: type[AnyModel], path: Path = ()) -> AnyModel:
+    """Hold a document, or the part of it at `path`, against a model; all errors at once.
+
+    Raises
+    ------
+    InputError
+        ``file:line:column: key: what was expected, what came, the remedy``, one line each.
+    """
+    value: Any = document.value
+    for key in path:
+        value = value[key]
+    try:
+        return model.model_validate_json(json.dumps(value, allow_nan=False))
+    except ValidationError as error:
+        known = _all_keys(model.model_json_schema())
+        details = _innermost(error.errors(include_url=False))
+        raise InputError(*dict.fromkeys(_explain(document, path, d, known) for d in details)) from None
+
+
+def _innermost(details: list[Any]) -> list[Any]:
+    """Leave out what is said of a whole because a part of it is wrong."""
+    paths = [detail["loc"] for detail in details]
+    return [d for d in details if not any(p != d["loc"] and p[: len(d["loc"])] == d["loc"] for p in paths)]
+
+
+def _all_keys(schema: Any) -> set[str]:
+    if isinstance(schema, list):
+        return set().union(*map(_all_keys, schema)) if schema else set()
+    if not isinstance(schema, dict):
+        return set()
+    keys = set(schema.get("properties", {}))
+    return keys.union(*(_all_keys(part) for part in schema.values()))
+
+
+def _explain(document: Document, prefix: Path, detail: Any, known: set[str]) -> str:
+    path = (*prefix, *(key for key in detail["loc"] if isinstance(key, str | int)))
+    kind, context = detail["type"], detail.get("ctx", {})
+    at = document.at(path)
+    if kind == "missing":
+        return f"{at}: missing; this key is required"
+    if kind == "extra_forbidden":
+        return f"{at}: unknown key{did_you_mean(str(path[-1]), known)}"
+    if kind == "value_error":
+        return f"{at}: {context['error']}"
+    return f"{at}: expected {_expected(kind, context, detail['msg'])}, got {_came(document, path, detail['input'])}"
+
+
+def _expected(kind: str, context: Mapping[str, Any], message: str) -> str:
+    plain = {
+        "float_type": "a number",
+        "int_type": "a whole number",
+        "int_from_float": "a whole number",
+        "string_type": "text",
+        "bool_type": "true or false",
+        "model_type": "keys and values",
+        "dict_type": "keys and values",
+        "tuple_type": "a list",
+        "list_type": "a list",
+        "date_from_datetime_parsing": "a date such as 2027-06-30",
+        "date_parsing": "a date such as 2027-06-30",
+        "date_type": "a date such as 2027-06-30",
+    }
+    bounds = {"greater_than": "gt", "greater_than_equal": "ge", "less_than": "lt", "less_than_equal": "le"}
+    words = {"gt": "more than", "ge": "at least", "lt": "less than", "le": "at most"}
+    if kind in plain:
+        return plain[kind]
+    if kind in bounds:
+        return f"{words[bounds[kind]]} {context[bounds[kind]]:g}"
+    if kind == "literal_error":
+        return f"one of {context['expected']}"
+    if kind in ("too_short", "too_long"):
+        bound = context.get("min_length", context.get("max_length"))
+        return f"{'at least' if kind == 'too_short' else 'at most'} {bound} values"
+    if kind == "string_pattern_mismatch":
+        return f"text that matches {context['pattern']}"
+    return message.removeprefix("Input should be ").removeprefix("a valid ")
+
+
+def _came(document: Document, path: Path, value: Any) -> str:
+    raw = document.raw.get(path)
+    if isinstance(value, str):
+        hint = ": to YAML this is text; write it as 1.0e-05" if _ALMOST_NUMBER.fullmatch(value) else ""
+        return f"the text {value[:60]!r}{hint}"
+    if isinstance(value, bool):
+        return f"{raw or value}, which is true or false to YAML; put text in quotes"
+    if isinstance(value, int | float):
+        return f"the number {raw or value}"
+    if value is None:
+        return "nothing"
+    return f"a list of {len(value)} values" if isinstance(value, list) else "keys and values"
+
+
+def _from_list(value: Any) -> Any:
+    if isinstance(value, list) and any(isinstance(v, bool) or not isinstance(v, int | float) for v in value):
+        raise ValueError("expected three numbers [x, y, z]")
+    return tuple(value) if isinstance(value, list) else value
+
+
+Vector3: TypeAlias = Annotated[tuple[float, float, float], BeforeValidator(_from_list)]
+
+
+def _number_or_pair(value: Any) -> Any:
+    pair = value if isinstance(value, list) else [value, value]
+    if len(pair) != 2 or any(isinstance(v, bool) or not isinstance(v, int | float) for v in pair):
+        came = f"the text {value!r}" if isinstance(value, str) else repr(value)
+        raise ValueError(f"expected one number or [shortest, longest], got {came}")
+    return tuple(pair)
+
+
+NumberOrPair: TypeAlias = Annotated[
+    tuple[float, float],
+    BeforeValidator(_number_or_pair),
+    WithJsonSchema(
+        {"anyOf": [{"type": "number"}, {"type": "array", "items": {"type": "number"}, "minItems": 2, "maxItems": 2}]}
+    ),
+]

@@ -1,0 +1,159 @@
+"""Tab-separated tables with a sidecar: UTF-8, ``n/a`` for missing, one description a column.
+
+Numbers are written with ``repr``: the shortest text that reads back as the same double.
+"""
+
+from __future__ import annotations
+
+import json
+import math
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any, Final
+
+import numpy as np
+
+from .errors import InputError, did_you_mean
+from .frames import FloatArray
+
+MISSING: Final = "n/a"
+
+
+@dataclass(frozen=True)
+class Column:
+    """What a column means: a sentence, and a unit where it has one."""
+
+    description: str
+    units: str | None = None
+    levels: Mapping[str, str] | None = None
+
+    def sidecar(self) -> dict[str, Any]:
+        """Return the BIDS-style entry."""
+        entry: dict[str, Any] = {"Description": self.description}
+        if self.units:
+            entry["Units"] = self.units
+        if self.levels:
+            entry["Levels"] = dict(self.levels)
+        return entry
+
+
+def number_text(value: float) -> str:
+    """Return the shortest text that reads back as the same double; ``n/a`` for NaN.
+
+    Examples
+    --------
+    >>> number_text(0.1), number_text(96.0), number_text(float("nan"))
+    ('0.1', '96.0', 'n/a')
+    """
+    return MISSING if math.isnan(value) else repr(float(value) + 0.0)
+
+
+def column_texts(values: Iterable[Any]) -> list[str]:
+    """Return the cells of a column as text; refuses text that would break the table."""
+    if isinstance(values, np.ndarray) and values.dtype.kind == "f":
+        return [MISSING if v != v else repr(v + 0.0) for v in values.tolist()]
+    return [check_cell(str(v)) for v in values]
+
+
+def check_cell(text: str) -> str:
+    """Return text that fits into a cell; tabs and line ends are refused, never replaced."""
+    if not text or any(c in text for c in "\t\r\n"):
+        raise InputError(f"{text!r} does not fit into a table: empty, or with a tab or a line end in it; rename it")
+    return text
+
+
+def to_tsv(columns: Mapping[str, Sequence[str]]) -> bytes:
+    """Return a table of texts as bytes."""
+    rows = zip(*columns.values(), strict=True)
+    return ("\n".join(["\t".join(columns), *map("\t".join, rows)]) + "\n").encode()
+
+
+def sidecar_bytes(columns: Mapping[str, Column], extra: Mapping[str, Any]) -> bytes:
+    """Return the sidecar: an entry a column, then what holds for the whole table."""
+    content = {name: column.sidecar() for name, column in columns.items()} | dict(extra)
+    return json_bytes(content)
+
+
+def json_bytes(content: Any) -> bytes:
+    """Return JSON as bytes, indented by one, never with NaN in it."""
+    return (json.dumps(content, indent=1, ensure_ascii=False, allow_nan=False) + "\n").encode()
+
+
+def read_tsv(data: bytes, name: str, required: Sequence[str], *, exact: bool = False) -> dict[str, list[str]]:
+    """Read a table of texts.
+
+    Parameters
+    ----------
+    data : bytes
+    name : str
+        Its path, for messages.
+    required : sequence of str
+        Columns that must be there.
+    exact : bool
+        Whether other columns are refused.
+
+    Raises
+    ------
+    InputError
+        One line for each missing, unknown or doubled column, and for each row of the wrong length.
+
+    Examples
+    --------
+    >>> read_tsv(b"pose\\tx_mm\\na\\t1\\n", "t.tsv", ["pose"])
+    {'pose': ['a'], 'x_mm': ['1']}
+    """
+    try:
+        lines = data.decode("utf-8").removeprefix("\ufeff").replace("\r\n", "\n").split("\n")
+    except UnicodeDecodeError as error:
+        raise InputError(f"{name}:1:1: not UTF-8 text (byte {error.start}); save the table as UTF-8") from None
+    if lines and not lines[-1]:
+        lines.pop()
+    if not lines:
+        raise InputError(f"{name}:1:1: empty; expected the columns {' '.join(required)}, tab-separated")
+    header = lines[0].split("\t")
+    _check_header(header, name, required, exact=exact)
+    cells = [line.split("\t") for line in lines[1:]]
+    wrong = [i for i, row in enumerate(cells) if len(row) != len(header)]
+    if wrong:
+        raise InputError(
+            *(f"{name}:{i + 2}:1: expected {len(header)} cells split by tabs, got {len(cells[i])}" for i in wrong[:20])
+        )
+    columns = list(map(list, zip(*cells, strict=True))) if cells else [[] for _ in header]
+    return dict(zip(header, columns, strict=True))
+
+
+def _check_header(header: list[str], name: str, required: Sequence[str], *, exact: bool) -> None:
+    problems = [
+        f"{name}:1:1: the column {column!r} is missing; expected {' '.join(required)}, tab-separated"
+        for column in required
+        if column not in header
+    ]
+    problems += [f"{name}:1:1: the column {c!r} stands there twice" for c in dict.fromkeys(header) if header.count(c) > 1]
+    if exact:
+        problems += [f"{name}:1:1: unknown column {c!r}{did_you_mean(c, required)}" for c in header if c not in required]
+    if problems:
+        raise InputError(*problems)
+
+
+def floats(cells: Sequence[str], name: str, column: str, *, missing: bool = False) -> FloatArray:
+    """Read a column of finite numbers; ``n/a`` becomes NaN where `missing` is allowed, everything else is refused."""
+    try:
+        array = np.array(cells, dtype=np.float64)
+        if np.isfinite(array).all():
+            return array
+    except ValueError:
+        pass
+    values, problems = np.full(len(cells), np.nan), []
+    for i, cell in enumerate(cells):
+        if cell == MISSING and missing:
+            continue
+        try:
+            values[i] = float(cell)
+        except ValueError:
+            problems.append(f"{name}:{i + 2}: {column}: expected a number, got {cell!r}")
+            continue
+        if not math.isfinite(values[i]):
+            problems.append(f"{name}:{i + 2}: {column}: expected a finite number, got {cell!r}")
+    if problems:
+        raise InputError(*problems[:20])
+    return values

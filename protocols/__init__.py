@@ -1,0 +1,1 @@
+"""Example protocols, coil files and the demo's invented lab: data only."""
