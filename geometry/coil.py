@@ -285,7 +285,9 @@ def _paths(file: CoilFile, document: Document, inputs: Inputs, path: Path | None
         else:
             highest = (part.loop or part.spiral).centre_mm[2]  # type: ignore[union-attr]  # one of three, checked
         if not highest <= FACE_TOLERANCE_MM:
-            problems.append(f"{where}: the winding crosses the contact face (z = {highest:g} > 0); windings lie behind it")
+            problems.append(
+                f"{where}: the winding crosses the contact face (z = {highest:g} > 0); windings lie behind it"
+            )
     if problems:
         raise InputError(*problems)
     return tuple(result)

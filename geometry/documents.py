@@ -23,6 +23,7 @@ Path: TypeAlias = "tuple[Key, ...]"
 Place: TypeAlias = "tuple[int, int]"
 
 DEEPEST_NESTING: Final = 40
+LARGEST_NUMBER: Final = 1e300
 _SEXAGESIMAL: Final = re.compile(r"[-+]?[0-9][0-9_]*(:[0-5]?[0-9])+(\.[0-9_]*)?")
 _OCTAL: Final = re.compile(r"[-+]?0[0-7_]+")
 _ALMOST_NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)[eE][-+]?\d+")
@@ -51,20 +52,25 @@ class Document:
         Both from 1; a path is the tuple of keys and indices that leads to a value.
     raw : mapping from path to str
         Scalars as they were typed.
+    problems : mapping from path to str
+        What YAML itself got wrong; `validate` says it together with everything else.
     """
 
     name: str
     value: dict[str, Any]
     places: Mapping[Path, Place]
     raw: Mapping[Path, str] = field(default_factory=dict)
+    problems: Mapping[Path, str] = field(default_factory=dict)
+
+    def place(self, path: Path) -> Place:
+        """Return line and column of a value, or of the nearest thing around it that exists."""
+        while path and path not in self.places:
+            path = path[:-1]
+        return self.places.get(path, (1, 1))
 
     def at(self, path: Path) -> str:
         """Return ``name:line:column: dotted.path`` of a value, or of the nearest thing around it that exists."""
-        known = path
-        while known and known not in self.places:
-            known = known[:-1]
-        line, column = self.places.get(known, (1, 1))
-        where = f"{self.name}:{line}:{column}"
+        where = ":".join([self.name, *map(str, self.place(path))])
         return f"{where}: {dotted(path)}" if path else where
 
 
@@ -95,7 +101,7 @@ def read_yaml(data: bytes, name: str) -> Document:
     Raises
     ------
     InputError
-        One line for each thing that is wrong.
+        Text that is no YAML mapping at all; what is wrong with single values waits for `validate`.
 
     Examples
     --------
@@ -111,9 +117,7 @@ def read_yaml(data: bytes, name: str) -> Document:
         raise InputError(f"{name}:1:1: expected keys and values (`key: value`), got something else or nothing")
     builder = _Builder(name)
     value = builder.build(root, ())
-    if builder.problems:
-        raise InputError(*builder.problems)
-    return Document(name, value, builder.places, builder.raw)
+    return Document(name, value, builder.places, builder.raw, builder.problems)
 
 
 def _compose(text: str, name: str) -> yaml.Node | None:
@@ -158,7 +162,7 @@ class _Builder:
         self.name = name
         self.places: dict[Path, Place] = {}
         self.raw: dict[Path, str] = {}
-        self.problems: list[str] = []
+        self.problems: dict[Path, str] = {}
 
     def build(self, node: yaml.Node, path: Path) -> Any:
         self.places[path] = (node.start_mark.line + 1, node.start_mark.column + 1)
@@ -174,43 +178,54 @@ class _Builder:
             mark = key_node.start_mark
             where = f"{self.name}:{mark.line + 1}:{mark.column + 1}"
             if not isinstance(key_node, yaml.ScalarNode):
-                self.problems.append(f"{where}: expected a word as key")
+                self._say(where, f"{where}: expected a word as key")
                 continue
             key = key_node.value
+            at = (*path, key)
             if key in result:
-                self.problems.append(f"{where}: {dotted((*path, key))}: this key stands here twice; keep one")
+                self._say(where, f"{where}: {dotted(at)}: this key stands here twice; keep one")
                 continue
-            result[key] = self.build(child, (*path, key))
-            self.places[(*path, key)] = (mark.line + 1, mark.column + 1)
+            result[key] = self.build(child, at)
+            self.places[at] = (mark.line + 1, mark.column + 1)
         return result
+
+    def _say(self, where: str, problem: str) -> None:
+        """Remember a problem of a key: it belongs to no value's path, so it hides no other problem."""
+        at: Path = (where,)
+        line, column = where.rsplit(":", 2)[1:]
+        self.places[at] = (int(line), int(column))
+        self.problems[at] = problem
 
     def _scalar(self, node: yaml.Node, path: Path) -> Any:
         text, kind = str(node.value), node.tag.rpartition(":")[2]
         self.raw[path] = text
         where = f"{self.name}:{node.start_mark.line + 1}:{node.start_mark.column + 1}: {dotted(path)}"
         if kind in ("int", "float"):
-            return self._number(text, kind, where)
+            return self._number(text, kind, where, path)
         if kind == "bool":
             return text.lower() in ("yes", "true", "on")
         if kind == "null":
             return None
         if kind not in ("str", "timestamp"):
-            self.problems.append(f"{where}: the tag {node.tag!r} is not used here; write a plain value")
+            self.problems[path] = f"{where}: the tag {node.tag!r} is not used here; write a plain value"
         return text
 
-    def _number(self, text: str, kind: str, where: str) -> Any:
+    def _number(self, text: str, kind: str, where: str, path: Path) -> Any:
+        problem = None
+        value: Any = None
         if _SEXAGESIMAL.fullmatch(text):
-            self.problems.append(f"{where}: {text} is a base-60 number to YAML; write plain seconds, or quote text")
-            return None
-        if _OCTAL.fullmatch(text):
-            self.problems.append(f"{where}: {text} is an octal number to YAML; take out the leading zero, or quote text")
-            return None
-        try:
-            value = yaml.safe_load(text)
-        except ValueError:
-            value = math.inf
-        if not math.isfinite(value) or abs(value) > 1e300:
-            self.problems.append(f"{where}: expected a finite number, got {text[:40]}")
+            problem = f"{text} is a base-60 number to YAML; write plain seconds, or quote text"
+        elif _OCTAL.fullmatch(text):
+            problem = f"{text} is an octal number to YAML; take out the leading zero, or quote text"
+        else:
+            try:
+                value = yaml.safe_load(text)
+            except ValueError:
+                value = math.inf
+            if not abs(value) <= LARGEST_NUMBER:
+                problem = f"expected a finite number, got {text[:40]}"
+        if problem:
+            self.problems[path] = f"{where}: {problem}"
             return None
         return int(value) if kind == "int" else float(value)
 
@@ -226,16 +241,25 @@ def validate(document: Document, model: type[AnyModel], path: Path = ()) -> AnyM
     value: Any = document.value
     for key in path:
         value = value[key]
+    said = document.problems
+    lines = [(document.place(at), line) for at, line in said.items()]
     try:
-        return model.model_validate_json(json.dumps(value, allow_nan=False))
+        checked = model.model_validate_json(json.dumps(value, allow_nan=False))
     except ValidationError as error:
         known = _all_keys(model.model_json_schema())
         details = _innermost(error.errors(include_url=False))
-        raise InputError(*dict.fromkeys(_explain(document, path, d, known) for d in details)) from None
+        for detail in details:
+            at = (*path, *detail["loc"])
+            if not any(other[: len(at)] == at for other in said):
+                lines.append((document.place(at), _explain(document, at, detail, known)))
+    if lines:
+        raise InputError(*dict.fromkeys(line for _, line in sorted(lines, key=lambda item: item[0])))
+    return checked
 
 
 def _innermost(details: list[Any]) -> list[Any]:
     """Leave out what is said of a whole because a part of it is wrong."""
+    details = [detail | {"loc": tuple(k for k in detail["loc"] if not str(k).startswith("<"))} for detail in details]
     paths = [detail["loc"] for detail in details]
     return [d for d in details if not any(p != d["loc"] and p[: len(d["loc"])] == d["loc"] for p in paths)]
 
@@ -249,8 +273,7 @@ def _all_keys(schema: Any) -> set[str]:
     return keys.union(*(_all_keys(part) for part in schema.values()))
 
 
-def _explain(document: Document, prefix: Path, detail: Any, known: set[str]) -> str:
-    path = (*prefix, *(key for key in detail["loc"] if isinstance(key, str | int)))
+def _explain(document: Document, path: Path, detail: Any, known: set[str]) -> str:
     kind, context = detail["type"], detail.get("ctx", {})
     at = document.at(path)
     if kind == "missing":
@@ -259,7 +282,9 @@ def _explain(document: Document, prefix: Path, detail: Any, known: set[str]) -> 
         return f"{at}: unknown key{did_you_mean(str(path[-1]), known)}"
     if kind == "value_error":
         return f"{at}: {context['error']}"
-    return f"{at}: expected {_expected(kind, context, detail['msg'])}, got {_came(document, path, detail['input'])}"
+    return (
+        f"{at}: expected {_expected(kind, context, detail['msg'])}, got {_came(document, path, kind, detail['input'])}"
+    )
 
 
 def _expected(kind: str, context: Mapping[str, Any], message: str) -> str:
@@ -293,18 +318,39 @@ def _expected(kind: str, context: Mapping[str, Any], message: str) -> str:
     return message.removeprefix("Input should be ").removeprefix("a valid ")
 
 
-def _came(document: Document, path: Path, value: Any) -> str:
+def _came(document: Document, path: Path, kind: str, value: Any) -> str:
     raw = document.raw.get(path)
     if isinstance(value, str):
         hint = ": to YAML this is text; write it as 1.0e-05" if _ALMOST_NUMBER.fullmatch(value) else ""
         return f"the text {value[:60]!r}{hint}"
     if isinstance(value, bool):
-        return f"{raw or value}, which is true or false to YAML; put text in quotes"
+        remedy = "; put text in quotes" if kind == "string_type" else ""
+        return f"{raw or value}, which is true or false to YAML{remedy}"
     if isinstance(value, int | float):
-        return f"the number {raw or value}"
+        return f"the number {raw or value}" + ("; put text in quotes" if kind == "string_type" else "")
     if value is None:
         return "nothing"
     return f"a list of {len(value)} values" if isinstance(value, list) else "keys and values"
+
+
+@dataclass(frozen=True)
+class AlsoAccepts:
+    """Says in the JSON Schema that a before-validator takes another form as well.
+
+    Parameters
+    ----------
+    other : dict, optional
+        Schema of that form; left out, it is one item of the list.
+    """
+
+    other: dict[str, Any] | None = None
+
+    def __get_pydantic_json_schema__(self, core_schema: Any, handler: Any) -> dict[str, Any]:
+        base = handler(core_schema)
+        return {"anyOf": [base["items"] if self.other is None else self.other, base]}
+
+    def __hash__(self) -> int:
+        return 0  # a schema is no key; annotations of one type may share a bucket
 
 
 def _from_list(value: Any) -> Any:

@@ -84,7 +84,9 @@ def _at_targets(
     big_length = np.sqrt(dot(big_r, big_r))
     bad = np.flatnonzero(~(big_length.min(axis=1) > np.linalg.norm(r[:, 0], axis=1)))
     if bad.size:
-        raise ItemError((first + int(i), "a coil element lies nearer to the sphere's centre than the point") for i in bad)
+        raise ItemError(
+            (first + int(i), "a coil element lies nearer to the sphere's centre than the point") for i in bad
+        )
     a = big_r - r
     a_length = np.sqrt(dot(a, a))
     a_dot_r = dot(a, big_r)

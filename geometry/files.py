@@ -6,7 +6,7 @@ import hashlib
 import os
 import shutil
 import tempfile
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -143,3 +143,44 @@ def _write_synced(path: Path, data: bytes) -> None:
         stream.write(data)
         stream.flush()
         os.fsync(stream.fileno())
+
+
+def stream_file(path: Path, chunks: Iterable[bytes], *, force: bool = False) -> Path:
+    """Write a file that is too large for memory: under a temporary name, then moved into place.
+
+    Raises
+    ------
+    InputError
+        The file exists with other bytes and `force` is not said, or the disk refuses; then nothing is left behind.
+    """
+    made = _first_missing(path.parent)
+    digest = hashlib.sha256()
+    try:
+        path.parent.mkdir(parents=True, exist_ok=True)
+        handle, staged = tempfile.mkstemp(prefix=".coilwright-", dir=path.parent)
+        try:
+            with os.fdopen(handle, "wb") as stream:
+                for chunk in chunks:
+                    digest.update(chunk)
+                    stream.write(chunk)
+                stream.flush()
+                os.fsync(stream.fileno())
+            if path.exists() and not force and _file_sha256(path) != digest.hexdigest():
+                raise InputError(f"{path}: exists and would change; name another place or say --force")
+            Path(staged).replace(path)
+        finally:
+            Path(staged).unlink(missing_ok=True)
+    except OSError as error:
+        if made is not None:
+            shutil.rmtree(made, ignore_errors=True)
+        raise InputError(f"{path}: cannot be written ({error.strerror or error}); nothing was left there") from None
+    return path
+
+
+def _file_sha256(path: Path) -> str:
+    with path.open("rb") as stream:
+        return (
+            hashlib.file_digest(stream, "sha256").hexdigest()
+            if hasattr(hashlib, "file_digest")
+            else sha256(stream.read())
+        )

@@ -65,9 +65,7 @@ def read_surface(path: Path | str, *, axes: str = "RAS", unit: str = "mm") -> Su
 def _trimesh(data: bytes, suffix: str) -> tuple[FloatArray, IntArray]:
     import trimesh
 
-    mesh: Any = trimesh.load(
-        io.BytesIO(data), file_type=suffix[1:], process=False, maintain_order=True, force="mesh"
-    )
+    mesh: Any = trimesh.load(io.BytesIO(data), file_type=suffix[1:], process=False, maintain_order=True, force="mesh")
     vertices, faces = np.array(mesh.vertices, dtype=np.float64), np.array(mesh.faces, dtype=np.int64)
     if suffix == ".stl":
         vertices, inverse = np.unique(vertices, axis=0, return_inverse=True)
@@ -77,9 +75,9 @@ def _trimesh(data: bytes, suffix: str) -> tuple[FloatArray, IntArray]:
 
 def _gifti(data: bytes) -> tuple[FloatArray, IntArray]:
     import nibabel
-    from nibabel.gifti import GiftiImage
+    from nibabel.gifti.gifti import GiftiImage
 
-    image = GiftiImage.from_bytes(data)
+    image: Any = GiftiImage.from_bytes(data)
     points = image.get_arrays_from_intent("NIFTI_INTENT_POINTSET")
     corners = image.get_arrays_from_intent("NIFTI_INTENT_TRIANGLE")
     if len(points) != 1 or len(corners) != 1:
@@ -90,5 +88,6 @@ def _gifti(data: bytes) -> tuple[FloatArray, IntArray]:
     vertices = np.asarray(points[0].data, dtype=np.float64)
     system = points[0].coordsys
     if system is not None and system.xform is not None:
-        vertices = nibabel.affines.apply_affine(np.asarray(system.xform, dtype=np.float64), vertices)
+        xform = np.asarray(system.xform, dtype=np.float64)
+        vertices = vertices @ xform[:3, :3].T + xform[:3, 3]
     return vertices, np.asarray(corners[0].data, dtype=np.int64)

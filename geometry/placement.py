@@ -84,7 +84,9 @@ def check_targets(scalp: Surface, targets: FloatArray) -> FloatArray:
         if outside[i]:
             reason = f"lies {distance:.1f} mm outside the head; check its frame, unit and sign"
         else:
-            reason = f"lies {distance:.1f} mm under the scalp, deeper than {DEEPEST_TARGET_MM:g} mm; check frame and unit"
+            reason = (
+                f"lies {distance:.1f} mm under the scalp, deeper than {DEEPEST_TARGET_MM:g} mm; check frame and unit"
+            )
         problems.append((int(i), reason))
     if problems:
         raise ItemError(problems)
@@ -137,7 +139,9 @@ def place(
     """
     nearest = check_targets(scalp, targets)
     if aim == "nearest_scalp":
-        return stand(scalp, nearest, directions, standoff_mm=standoff_mm, normal_radius_mm=normal_radius_mm, turned=turned)
+        return stand(
+            scalp, nearest, directions, standoff_mm=standoff_mm, normal_radius_mm=normal_radius_mm, turned=turned
+        )
     if spheres is None:
         raise ItemError([(0, "aim over_target needs the sphere whose centre the ray leaves")])
     outwards = unit_vectors(targets - spheres.centres, "target minus the sphere's centre")
@@ -227,5 +231,5 @@ def scalp_quality(scalp: Surface, points: FloatArray, names: Sequence[str]) -> l
             f"the scalp's normals at {radii} mm disagree by {worst[i]:.1f} degrees (over {QUALITY_LIMIT_DEG:g}): smooth"
             " the scalp, use a finer mesh, or raise placement.normal_radius_mm",
         )
-        for i in np.flatnonzero(~(worst <= QUALITY_LIMIT_DEG))
+        for i in np.flatnonzero(~(worst <= QUALITY_LIMIT_DEG)).tolist()
     ]

@@ -11,6 +11,7 @@ from functools import cached_property
 from typing import Protocol
 
 import numpy as np
+from scipy.spatial.transform import Rotation
 
 from .errors import InputError
 from .frames import FloatArray, read_only
@@ -155,7 +156,7 @@ class Capsule:
         along = self.to_mm - self.from_mm
         length = float(np.linalg.norm(along))
         mesh = trimesh.creation.capsule(height=length, radius=self.radius_mm, count=[24, 24])
-        turn = trimesh.geometry.align_vectors([0, 0, 1], along / length)[:3, :3]
+        turn = Rotation.align_vectors((along / length)[None], [[0.0, 0.0, 1.0]])[0].as_matrix()
         centred = np.asarray(mesh.vertices) - np.asarray(mesh.vertices).mean(axis=0)
         return Surface(centred @ turn.T + (self.from_mm + self.to_mm) / 2, np.asarray(mesh.faces), "capsule")
 

@@ -126,7 +126,7 @@ class Surface:
     @cached_property
     def vertex_areas(self) -> FloatArray:
         """A third of the area of the faces around each vertex, shape (V,), mm2."""
-        return np.bincount(self.faces.ravel(), np.repeat(self.areas / 3.0, 3), len(self.vertices))
+        return read_only(np.bincount(self.faces.ravel(), np.repeat(self.areas / 3.0, 3), len(self.vertices)))
 
     @cached_property
     def is_closed(self) -> bool:
@@ -254,7 +254,7 @@ class Surface:
             to_last = self.triangles[:, (k + 2) % 3] - self.triangles[:, k]
             angle = np.radians(angle_between_deg(to_next, to_last))
             np.add.at(total, self.faces[:, k], self.face_normals * angle[:, None])
-        return total
+        return np.asarray(total)
 
     @cached_property
     def _neighbours(self) -> IntArray:
@@ -266,7 +266,7 @@ class Surface:
         reverse = edges[:, 1] * len(self.vertices) + edges[:, 0]
         at = np.minimum(np.searchsorted(keys[order], reverse), len(keys) - 1)
         partner = np.where(keys[order][at] == reverse, order[at] % count, np.tile(np.arange(count), 3))
-        return partner.reshape(3, count)[[1, 2, 0]].T
+        return np.asarray(partner.reshape(3, count)[[1, 2, 0]].T)
 
     def normals(self, points: ArrayLike, radius_mm: float) -> FloatArray:
         """Return outward unit normals (N, 3): the area-weighted mean over the surface within `radius_mm` of each point.
@@ -301,7 +301,7 @@ class Surface:
         return np.asarray(total / length[:, None])
 
     def _areas_in_balls(self, centres: FloatArray, radius: float) -> tuple[IntArray, IntArray, FloatArray]:
-        """Pairs of ball and face, and the face's area inside the ball; only faces cut by the ball's edge are clipped."""
+        """Pairs of ball and face, and the face's area inside the ball; faces cut by the ball's edge are clipped."""
         pairs = KDTree(centres).sparse_distance_matrix(
             self._centroid_tree, radius + self._reach.max(), output_type="ndarray"
         )

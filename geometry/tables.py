@@ -51,7 +51,7 @@ def number_text(value: float) -> str:
 def column_texts(values: Iterable[Any]) -> list[str]:
     """Return the cells of a column as text; refuses text that would break the table."""
     if isinstance(values, np.ndarray) and values.dtype.kind == "f":
-        return [MISSING if v != v else repr(v + 0.0) for v in values.tolist()]
+        return [MISSING if math.isnan(v) else repr(v + 0.0) for v in values.tolist()]
     return [check_cell(str(v)) for v in values]
 
 
@@ -80,7 +80,7 @@ def json_bytes(content: Any) -> bytes:
 
 
 def read_tsv(data: bytes, name: str, required: Sequence[str], *, exact: bool = False) -> dict[str, list[str]]:
-    """Read a table of texts.
+    r"""Read a table of texts.
 
     Parameters
     ----------
@@ -99,7 +99,7 @@ def read_tsv(data: bytes, name: str, required: Sequence[str], *, exact: bool = F
 
     Examples
     --------
-    >>> read_tsv(b"pose\\tx_mm\\na\\t1\\n", "t.tsv", ["pose"])
+    >>> read_tsv(b"pose\tx_mm\na\t1\n", "t.tsv", ["pose"])
     {'pose': ['a'], 'x_mm': ['1']}
     """
     try:
@@ -128,9 +128,13 @@ def _check_header(header: list[str], name: str, required: Sequence[str], *, exac
         for column in required
         if column not in header
     ]
-    problems += [f"{name}:1:1: the column {c!r} stands there twice" for c in dict.fromkeys(header) if header.count(c) > 1]
+    problems += [
+        f"{name}:1:1: the column {c!r} stands there twice" for c in dict.fromkeys(header) if header.count(c) > 1
+    ]
     if exact:
-        problems += [f"{name}:1:1: unknown column {c!r}{did_you_mean(c, required)}" for c in header if c not in required]
+        problems += [
+            f"{name}:1:1: unknown column {c!r}{did_you_mean(c, required)}" for c in header if c not in required
+        ]
     if problems:
         raise InputError(*problems)
 

@@ -92,9 +92,7 @@ def quadrature_error(coil: Coil, points_mm: FloatArray, *, radial: int = RADIAL,
     float
         Largest difference over the largest field.
     """
-    fields = [
-        _free_space_field(coil_elements(coil, radial=radial * k, around=around * k), points_mm) for k in (1, 3)
-    ]
+    fields = [_free_space_field(coil_elements(coil, radial=radial * k, around=around * k), points_mm) for k in (1, 3)]
     scale = np.linalg.norm(fields[1], axis=1).max()
     return float(np.linalg.norm(fields[0] - fields[1], axis=1).max() / scale)
 
@@ -143,7 +141,7 @@ def _spiral(spiral: Spiral, radial: int, around: int) -> tuple[FloatArray, Float
 
 
 def _path(wire: FloatArray, radial: int) -> tuple[FloatArray, FloatArray]:
-    """A fan of triangles from the wire's middle; a wire that does not end where it began is closed by a straight one."""
+    """A fan of triangles from the wire's middle; an open wire is closed by a straight stretch."""
     following = np.roll(wire, -1, axis=0)
     middle = wire.mean(axis=0)
     area = 0.5 * cross(wire - middle, following - middle)

@@ -1,0 +1,56 @@
+"""From a protocol or a plan to a rehearsal: the same schedule object that delivery would take."""
+
+from __future__ import annotations
+
+import datetime as dt
+from pathlib import Path
+
+from coilwright.geometry.files import Inputs
+
+from .case import Case
+from .ledger import read_ledger
+from .planning import plan_poses, read_source
+from .plans import Plan, is_plan, ledger_folder, plan_schedule, read_plan, schedule_for
+from .rehearsal import Rehearsal, rehearse
+
+
+def load_plan(path: Path, schedule: Path | None = None) -> Plan:
+    """Return the plan of a folder, or what the plan of a protocol would be.
+
+    Parameters
+    ----------
+    path : Path
+        A protocol file or the folder of a plan.
+    schedule : Path, optional
+        A schedule written by another program or by hand, instead of the plan's own.
+    """
+    if is_plan(path):
+        plan = read_plan(path)
+        return plan if schedule is None else _with_schedule(plan, schedule)
+    inputs = Inputs()
+    source = read_source(path, inputs)
+    planned = plan_poses(source, inputs)
+    if schedule is not None:
+        return Plan(source, planned.poses, schedule_for(source, planned.poses, schedule), ledger_folder(source))
+    return Plan(source, planned.poses, plan_schedule(planned), ledger_folder(source))
+
+
+def _with_schedule(plan: Plan, path: Path) -> Plan:
+    return Plan(plan.source, plan.poses, schedule_for(plan.source, plan.poses, path), plan.ledger)
+
+
+def dry_run(plan: Plan, now: dt.datetime | None = None) -> Rehearsal:
+    """Hold a plan against every limit as if it began at `now` (the local time if left out)."""
+    source = plan.source
+    earlier = None if plan.ledger is None else read_ledger(plan.ledger, source.protocol.person)
+    return rehearse(
+        Case(
+            plan.schedule,
+            source.protocol,
+            source.lab,
+            source.coil,
+            plan.unreachable,
+            now or dt.datetime.now().astimezone(),
+            earlier,
+        )
+    )

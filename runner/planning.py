@@ -1,0 +1,435 @@
+"""The one place where a protocol meets the geometry: protocol to poses."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from coilwright.geometry.clearance import DISTANCE_TOLERANCE_MM, Lifted, Obstacle, clearances, lift_clear
+from coilwright.geometry.coil import Coil, load_coil
+from coilwright.geometry.documents import Document, read_yaml
+from coilwright.geometry.draws import Draws
+from coilwright.geometry.errors import Finding, InputError, ItemError
+from coilwright.geometry.field import check_inside, field_at_targets
+from coilwright.geometry.files import Inputs
+from coilwright.geometry.frames import FloatArray, angle_between_deg, points_to_ras_mm
+from coilwright.geometry.mesh_files import parse_surface
+from coilwright.geometry.phantom import phantom_cortex, phantom_scalp
+from coilwright.geometry.placement import Directions, Standing, check_targets, place, scalp_quality, stand
+from coilwright.geometry.pose_list import PoseList
+from coilwright.geometry.pose_sets import patch, random_scalp_points
+from coilwright.geometry.sphere import FIT_RADIUS_MM, NARROW_FIT_RADIUS_MM, RESIDUAL_FINDING_MM, Spheres, fit_spheres
+from coilwright.geometry.surface import Surface, check_head_size, outward
+from coilwright.geometry.tables import MISSING, column_texts, floats, read_tsv
+from coilwright.geometry.targets import TargetSpec, read_target_table
+from coilwright.geometry.triangles import dot
+from coilwright.geometry.windings import coil_elements
+
+from .lab import LabFile, parse_lab
+from .protocol import HeadSpec, Protocol, parse_protocol
+
+# A lift over this is worth a look, mm.
+LIFT_FINDING_MM = 2.0
+# A change of the field between the two sphere fits over this is worth a look.
+FIT_CHANGE_FINDING = 0.10
+
+
+@dataclass(frozen=True)
+class Source:
+    """A protocol with everything that its files say, read once.
+
+    Attributes
+    ----------
+    path : Path
+        Of the protocol.
+    document : Document
+    protocol : Protocol
+    lab : LabFile or None
+    lab_path : Path or None
+        The ledger's folder is relative to it.
+    coil : Coil
+    """
+
+    path: Path
+    document: Document
+    protocol: Protocol
+    lab: LabFile | None
+    lab_path: Path | None
+    coil: Coil
+
+
+@dataclass(frozen=True)
+class Head:
+    """The subject's head: surfaces in the head frame, what to look at, named points."""
+
+    scalp: Surface
+    cortex: tuple[Surface, ...]
+    origin: str
+    landmarks: dict[str, FloatArray]
+    findings: tuple[Finding, ...]
+
+
+@dataclass(frozen=True)
+class Planned:
+    """Poses of a protocol, those that cannot be reached included.
+
+    Attributes
+    ----------
+    source : Source
+    head : Head
+    poses : PoseList
+        With every column of ``poses.tsv``.
+    reachable : ndarray of bool, shape (N,)
+    findings : tuple of Finding
+    """
+
+    source: Source
+    head: Head
+    poses: PoseList
+    reachable: np.ndarray
+    findings: tuple[Finding, ...]
+
+
+def read_source(path: Path, inputs: Inputs) -> Source:
+    """Read a protocol, its lab file and its coil.
+
+    Raises
+    ------
+    InputError
+        Everything that is wrong, all at once.
+    """
+    _, data = inputs.open(str(path))
+    document = read_yaml(data, str(path))
+    protocol = parse_protocol(document)
+    problems: list[str] = []
+    lab, lab_path, coil = None, None, None
+    try:
+        lab, lab_path = _read_lab(protocol, document, path, inputs)
+    except InputError as error:
+        problems += error.lines
+    try:
+        coil = load_coil(protocol.coil, inputs, path, document.at(("coil",)))
+    except InputError as error:
+        problems += error.lines
+    if problems or coil is None:
+        raise InputError(*problems)
+    return Source(path, document, protocol, lab, lab_path, coil)
+
+
+def _read_lab(protocol: Protocol, document: Document, path: Path, inputs: Inputs) -> tuple[LabFile | None, Path | None]:
+    if protocol.limits is None:
+        return None, None
+    lab_path, data = inputs.open(protocol.limits, path, document.at(("limits",)))
+    return parse_lab(read_yaml(data, str(lab_path))), lab_path
+
+
+def read_head(source: Source, inputs: Inputs) -> Head:
+    """Read the head's surfaces and landmarks into the head frame.
+
+    Raises
+    ------
+    InputError
+        Files that are missing, damaged, or no head in the declared unit.
+    """
+    spec = source.protocol.head
+    landmarks = _landmarks(spec, source, inputs)
+    if spec.phantom:
+        return Head(phantom_scalp(), (phantom_cortex(),), spec.origin or "surface", landmarks, ())
+    where = source.document.at(("head", "scalp"))
+    scalp = _surface(str(spec.scalp), spec, source, inputs, where)
+    _within(where, check_head_size, scalp, spec.unit)
+    scalp, turned = outward(scalp)
+    cortex = tuple(
+        _surface(written, spec, source, inputs, source.document.at(("head", "cortex"))) for written in spec.cortex
+    )
+    return Head(scalp, cortex, str(spec.origin), landmarks, (*scalp.findings(), *turned))
+
+
+def _within(where: str, check: object, *args: object) -> object:
+    """Call a check and put the place in the file before what it says."""
+    try:
+        return check(*args)  # type: ignore[operator]  # any callable
+    except InputError as error:
+        raise InputError(*(f"{where}: {line}" for line in error.lines)) from None
+
+
+def _surface(written: str, spec: HeadSpec, source: Source, inputs: Inputs, where: str) -> Surface:
+    path, data = inputs.open(written, source.path, where)
+    try:
+        return parse_surface(data, path.name, axes=spec.axes, unit=spec.unit)
+    except InputError as error:
+        raise InputError(*(f"{where}: {line}" for line in error.lines)) from None
+
+
+def _landmarks(spec: HeadSpec, source: Source, inputs: Inputs) -> dict[str, FloatArray]:
+    if spec.landmarks is None:
+        return {}
+    path, data = inputs.open(spec.landmarks, source.path, source.document.at(("head", "landmarks")))
+    table = read_tsv(data, str(path), ("name", "x_mm", "y_mm", "z_mm"), exact=True)
+    points = np.stack([floats(table[c], str(path), c) for c in ("x_mm", "y_mm", "z_mm")], axis=1)
+    converted = points_to_ras_mm(points, axes=spec.axes, unit="mm")
+    if len(set(table["name"])) < len(table["name"]):
+        raise InputError(f"{path}: two landmarks have one name; names must be unique")
+    return dict(zip(table["name"], converted, strict=True))
+
+
+def read_targets(source: Source, inputs: Inputs) -> tuple[list[TargetSpec], list[str]]:
+    """Return the targets and the place of each, from the protocol's list or its table."""
+    listed = source.protocol.targets
+    if isinstance(listed, tuple):
+        return list(listed), [source.document.at(("targets", i)) for i in range(len(listed))]
+    path, data = inputs.open(listed, source.path, source.document.at(("targets",)))
+    targets, wheres = read_target_table(data, str(path))
+    names = [target.name for target in targets]
+    twice = [i for i, name in enumerate(names) if name in names[:i]]
+    if twice:
+        raise InputError(*(f"{wheres[i]}: {names[i]!r} is the name of two targets; rename one" for i in twice))
+    return targets, wheres
+
+
+def plan_poses(source: Source, inputs: Inputs) -> Planned:
+    """Turn a protocol's targets and region into poses.
+
+    Returns
+    -------
+    Planned
+        Every pose with its numbers, reachable or not.
+
+    Raises
+    ------
+    InputError
+        Targets or regions that mean nothing on this head, each with its place in the file.
+    """
+    head = read_head(source, inputs)
+    targets, wheres = read_targets(source, inputs)
+    findings = [*source.coil.findings, *head.findings]
+    parts: list[PoseList] = []
+    if targets:
+        try:
+            part, found = _target_poses(source, head, targets)
+        except ItemError as error:
+            raise InputError(*(f"{wheres[i]}: {targets[i].name}: {reason}" for i, reason in error.problems)) from None
+        parts.append(part)
+        findings += found
+    if source.protocol.region:
+        where = source.document.at(("region",))
+        try:
+            part, found = _region_poses(source, head)
+        except InputError as error:
+            raise InputError(*(f"{where}: {line}" for line in error.lines)) from None
+        parts.append(part)
+        findings += found
+    poses = _joined(parts)
+    return Planned(source, head, poses, np.array(poses.reachable()), tuple(findings))
+
+
+def _joined(parts: Sequence[PoseList]) -> PoseList:
+    first = parts[0]
+    return PoseList.of(
+        [name for part in parts for name in part.names],
+        np.concatenate([part.pose.matrix for part in parts]),
+        first.origin,
+        coil=first.coil,
+        turned=first.turned,
+        columns={c: [cell for part in parts for cell in part.columns[c]] for c in first.columns},
+    )
+
+
+def _target_poses(source: Source, head: Head, targets: list[TargetSpec]) -> tuple[PoseList, list[Finding]]:
+    protocol, names = source.protocol, [target.name for target in targets]
+    points = np.array([target.at_mm for target in targets])
+    nearest = check_targets(head.scalp, points)
+    spheres = _spheres(source, head, nearest)
+    check_inside(spheres, points)
+    _check_cortex_in_sphere(source, head)
+    standing = place(
+        head.scalp,
+        points,
+        Directions(
+            np.array([target.direction.vector or (np.nan,) * 3 for target in targets]),
+            np.array([np.nan if (d := t.direction.midline_deg) is None else d for t in targets]),
+        ),
+        standoff_mm=protocol.standoff_mm,
+        normal_radius_mm=protocol.placement.normal_radius_mm,
+        aim=protocol.placement.aim,
+        spheres=spheres,
+        turned=source.coil.turned,
+    )
+    lifted = _lift(source, head, standing)
+    numbers = {
+        "target_depth_mm": np.linalg.norm(lifted.head_from_coil[:, :3, 3] - points, axis=1),
+        "projection_deg": standing.projection_deg,
+    }
+    field, found = _field_columns(source, head, lifted, standing, points, spheres, nearest)
+    findings = [Finding(name, message) for name, message in scalp_quality(head.scalp, standing.scalp_points, names)]
+    findings += found + _sphere_findings(spheres, names) + _lift_findings(lifted, names, protocol.reach.lift_most_mm)
+    return _table(source, head, names, names, lifted, numbers | field), findings
+
+
+def _region_poses(source: Source, head: Head) -> tuple[PoseList, list[Finding]]:
+    protocol, region = source.protocol, source.protocol.region
+    assert region is not None
+    draws = Draws(region.seed, "region")
+    where = patch(head.scalp, np.array(region.centre_mm), region.radius_mm)
+    points = random_scalp_points(head.scalp, where, region.poses, draws)
+    low, high = region.midline_deg
+    angles = low + (high - low) * draws.unit(region.poses)
+    standing = stand(
+        head.scalp,
+        points,
+        Directions.midline(angles),
+        standoff_mm=protocol.standoff_mm,
+        normal_radius_mm=protocol.placement.normal_radius_mm,
+        turned=source.coil.turned,
+    )
+    lifted = _lift(source, head, standing)
+    width = max(3, len(str(region.poses)))
+    names = [f"region-{i + 1:0{width}d}" for i in range(region.poses)]
+    missing = np.full(region.poses, np.nan)
+    numbers = dict.fromkeys(("target_depth_mm", "projection_deg", "direction_error_deg", "field_per_slope"), missing)
+    table = _table(source, head, names, [MISSING] * len(names), lifted, numbers)
+    return table, _lift_findings(lifted, names, protocol.reach.lift_most_mm)
+
+
+def _spheres(source: Source, head: Head, at: FloatArray) -> Spheres:
+    given = source.protocol.head.sphere
+    if given:
+        return Spheres.given(given.centre_mm, given.radius_mm, len(at))
+    return fit_spheres(head.scalp, at)
+
+
+def _check_cortex_in_sphere(source: Source, head: Head) -> None:
+    given = source.protocol.head.sphere
+    if given is None:
+        return
+    for cortex in head.cortex:
+        farthest = float(np.linalg.norm(cortex.vertices - np.array(given.centre_mm), axis=1).max())
+        if not farthest < given.radius_mm:
+            where = source.document.at(("head", "sphere"))
+            raise InputError(
+                f"{where}: {cortex.name} reaches {farthest:.1f} mm from the sphere's centre, beyond its radius"
+                f" {given.radius_mm:g}; give a sphere that holds the cortex, or leave it out to have it fitted"
+            )
+
+
+def _lift(source: Source, head: Head, standing: Standing) -> Lifted:
+    return lift_clear(
+        standing.head_from_coil,
+        source.coil.solids,
+        head.scalp,
+        standoff_mm=source.protocol.standoff_mm,
+        lift_most_mm=source.protocol.reach.lift_most_mm,
+    )
+
+
+def _field_columns(
+    source: Source,
+    head: Head,
+    lifted: Lifted,
+    standing: Standing,
+    points: FloatArray,
+    spheres: Spheres,
+    nearest: FloatArray,
+) -> tuple[dict[str, FloatArray], list[Finding]]:
+    """The field of the stimulating phase at each target: along the wanted direction, and its angle to it."""
+    missing = np.full(len(points), np.nan)
+    if not source.coil.file.windings:
+        note = Finding(source.coil.name, "the coil file has no windings: no field is known, its columns are n/a")
+        return {"direction_error_deg": missing, "field_per_slope": missing}, [note]
+    elements = coil_elements(source.coil)
+    sign = source.coil.effective_sign
+
+    def field(centres: FloatArray) -> FloatArray:
+        return sign * field_at_targets(lifted.head_from_coil, elements, points, centres)
+
+    e = field(spheres.centres)
+    columns = {
+        "direction_error_deg": angle_between_deg(standing.wanted, e),
+        "field_per_slope": dot(e, standing.wanted),
+    }
+    if source.protocol.head.sphere:
+        return columns, []
+    narrow = field(fit_spheres(head.scalp, nearest, within_mm=NARROW_FIT_RADIUS_MM).centres)
+    change = np.linalg.norm(narrow - e, axis=1) / np.linalg.norm(e, axis=1)
+    worst = int(change.argmax())
+    if not change[worst] > FIT_CHANGE_FINDING:
+        return columns, []
+    words = (
+        f"the field changes by up to {change[worst]:.0%} between spheres fitted within {NARROW_FIT_RADIUS_MM:g}"
+        f" and {FIT_RADIUS_MM:g} mm (target {worst + 1} of {len(points)}): the head is far from a sphere there; read its"
+        " field with care"
+    )
+    return columns, [Finding("sphere", words)]
+
+
+def _sphere_findings(spheres: Spheres, names: list[str]) -> list[Finding]:
+    rows = np.flatnonzero(~(spheres.residual_mm <= RESIDUAL_FINDING_MM))
+    return [
+        Finding(
+            names[i],
+            f"the fitted sphere leaves {spheres.residual_mm[i]:.1f} mm (over {RESIDUAL_FINDING_MM:g}): the field there"
+            " is rough; give head.sphere if you know better",
+        )
+        for i in rows
+    ]
+
+
+def _lift_findings(lifted: Lifted, names: list[str], most: float) -> list[Finding]:
+    rows = np.flatnonzero((lifted.lift_mm > LIFT_FINDING_MM) & (lifted.lift_mm < most))
+    return [
+        Finding(
+            names[i],
+            f"lifted by {lifted.lift_mm[i]:.1f} mm (over {LIFT_FINDING_MM:g}) to keep the casing off the scalp",
+        )
+        for i in rows
+    ]
+
+
+def _table(
+    source: Source, head: Head, names: list[str], targets: list[str], lifted: Lifted, numbers: dict[str, FloatArray]
+) -> PoseList:
+    clearance, reasons = _reach(source, lifted)
+    texts = {
+        "scalp_mm": head.scalp.nearest(lifted.head_from_coil[:, :3, 3]).distance,
+        "clearance_mm": clearance,
+        **numbers,
+        "tilt_clear_deg": np.full(len(names), np.nan),
+    }
+    return PoseList.of(
+        names,
+        lifted.head_from_coil,
+        head.origin,
+        coil=source.coil.name,
+        turned=source.coil.turned,
+        columns={
+            "target": targets,
+            **{name: column_texts(values) for name, values in texts.items()},
+            "reachable": ["no" if reason else "yes" for reason in reasons],
+            "reason": [reason or MISSING for reason in reasons],
+        },
+    )
+
+
+def _reach(source: Source, lifted: Lifted) -> tuple[FloatArray, list[str]]:
+    """Least clearance of each pose, and why it cannot be reached (or an empty text)."""
+    protocol, reach = source.protocol, source.protocol.reach
+    clearance = lifted.clearance_mm.copy()
+    reasons: list[list[str]] = [[] for _ in clearance]
+    for i in np.flatnonzero(~(lifted.clearance_mm >= protocol.standoff_mm - 2 * DISTANCE_TOLERANCE_MM)):
+        reasons[i].append(
+            f"scalp {_distance(clearance[i])} at the largest lift of {reach.lift_most_mm:g} mm,"
+            f" {protocol.standoff_mm:g} mm wanted"
+        )
+    for keep_out in reach.keep_out:
+        obstacle = Obstacle.ball(keep_out.name, np.array(keep_out.centre_mm), keep_out.radius_mm, reach.margin_mm)
+        distance = clearances(lifted.head_from_coil, source.coil.solids, obstacle)
+        clearance = np.minimum(clearance, distance)
+        for i in np.flatnonzero(~(distance >= reach.margin_mm - DISTANCE_TOLERANCE_MM)):
+            reasons[i].append(f"{keep_out.name} {_distance(distance[i])}, {reach.margin_mm:g} mm wanted")
+    return clearance, ["; ".join(parts) for parts in reasons]
+
+
+def _distance(value: float) -> str:
+    return f"{value:.1f} mm away" if value >= 0 else f"entered by {-value:.1f} mm"
