@@ -72,8 +72,8 @@ def least_distance(
     Returns
     -------
     ndarray, shape (count,)
-        Never below the true distance, above it by at most 1e-6 mm. Negative where a triangle enters a solid (then it
-        is the depth of the deepest point found, good to 1e-6 mm as well).
+        Never below the true distance, above it by at most 1e-6 mm. Negative where a triangle enters a solid: minus the
+        depth of a point inside, not of the deepest one.
     """
     best = np.full(count, above)
     pending: list[tuple[Solid, FloatArray, IntArray]] = []
@@ -99,10 +99,10 @@ def _refine(solid: Solid, triangles: FloatArray, owner: IntArray, best: FloatArr
         value, slope = solid.distance_and_gradient(middle)
         np.minimum.at(best, owner, value)
         lowest = value + dot(slope[:, None], triangles - middle[:, None]).min(axis=1)
-        keep = lowest < best[owner] - DISTANCE_TOLERANCE_MM
+        keep = (lowest < best[owner] - DISTANCE_TOLERANCE_MM) & (best[owner] >= 0)
         triangles, owner = _split(triangles[keep]), np.tile(owner[keep], 4)
         np.minimum.at(best, owner, solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1))
-    raise ArithmeticError("a distance did not converge")  # bounds close by a factor of two at least each round
+    raise ArithmeticError("a distance did not converge")  # outside a solid each round halves the bounds at least
 
 
 def _split(triangles: FloatArray) -> FloatArray:

@@ -34,7 +34,7 @@ class Draws:
     Examples
     --------
     >>> Draws(7, "order").shuffled(5).tolist()
-    [1, 3, 4, 0, 2]
+    [4, 0, 1, 3, 2]
     """
 
     def __init__(self, seed: int, purpose: str) -> None:

@@ -243,7 +243,7 @@ class Surface:
         normal[corner] = self._vertex_normals[self.faces[found.face[corner], zeros[corner].argmin(axis=1)]]
         edge = np.flatnonzero(zeros.sum(axis=1) == 1)
         normal[edge] += self.face_normals[self._neighbours[found.face[edge], zeros[edge].argmax(axis=1)]]
-        return normal
+        return np.asarray(normal)
 
     @cached_property
     def _vertex_normals(self) -> FloatArray:

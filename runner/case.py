@@ -64,7 +64,7 @@ class Case:
     @property
     def repeated(self) -> bool:
         """Whether the session holds more than one train."""
-        return len(self.trains) > 1
+        return int(self.trains.parts.sum()) > 1
 
     def percent_milli(self, output_milli: int, kind: str) -> int | None:
         """Return an output in thousandths of a percent of a threshold, rounded up; None without that threshold.

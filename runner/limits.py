@@ -123,6 +123,18 @@ def at_least(rule: str, worst: float, limit: float | None, *, tolerance: float =
     return check(rule, verdict, limit=limit, worst=worst, margin=worst - limit, **more)
 
 
+def faster(rate_hz: float, limit_hz: float) -> bool:
+    """Say whether a rate is above a limit: its period is more than 0.1 % shorter (an onset 1 us early is not).
+
+    Examples
+    --------
+    >>> faster(1e6 / 49_950, 20.0), faster(1e6 / 49_949, 20.0)
+    (False, True)
+    """
+    tolerance = float(published()["trains_found"]["relative_tolerance"])
+    return not rate_hz * (1 - tolerance) <= limit_hz * (1 + 1e-12)
+
+
 def table_cell(rule: str, values: str, rate_hz: float, percent_milli: int) -> float | None:
     """Look a table up, rounding rate and intensity up to the next row and column; None beyond the table.
 
@@ -133,7 +145,7 @@ def table_cell(rule: str, values: str, rate_hz: float, percent_milli: int) -> fl
     values : str
         ``seconds`` or ``pulses``.
     rate_hz : float
-        Compared with a relative tolerance of 0.1 %.
+        Compared by its period, with a relative tolerance of 0.1 %.
     percent_milli : int
         Thousandths of a percent of resting threshold, compared exactly.
 
@@ -143,8 +155,7 @@ def table_cell(rule: str, values: str, rate_hz: float, percent_milli: int) -> fl
     (5.0, 0.55)
     """
     table = published()[rule]
-    tolerance = float(published()["trains_found"]["relative_tolerance"])
-    row = next((i for i, hz in enumerate(table["rows_hz"]) if rate_hz <= hz * (1 + tolerance)), None)
+    row = next((i for i, hz in enumerate(table["rows_hz"]) if not faster(rate_hz, hz)), None)
     column = next((i for i, p in enumerate(table["columns_percent"]) if percent_milli <= p * 1000), None)
     return None if row is None or column is None else float(table[values][row][column])
 
@@ -183,7 +194,6 @@ class Approvals:
 def _covers(approval: Approval, rate_hz: float | None, percent: float | None, pattern: str | None) -> bool:
     if approval.pattern != pattern:
         return False
-    tolerance = 1 + float(published()["trains_found"]["relative_tolerance"])
-    rate_fits = approval.rate_hz is None or (rate_hz is not None and rate_hz <= approval.rate_hz * tolerance)
+    rate_fits = approval.rate_hz is None or (rate_hz is not None and not faster(rate_hz, approval.rate_hz))
     percent_fits = approval.threshold_percent is None or (percent is not None and percent <= approval.threshold_percent)
     return rate_fits and percent_fits

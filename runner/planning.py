@@ -358,8 +358,8 @@ def _field_columns(
         return columns, []
     words = (
         f"the field changes by up to {change[worst]:.0%} between spheres fitted within {NARROW_FIT_RADIUS_MM:g}"
-        f" and {FIT_RADIUS_MM:g} mm (target {worst + 1} of {len(points)}): the head is far from a sphere there; read its"
-        " field with care"
+        f" and {FIT_RADIUS_MM:g} mm (target {worst + 1} of {len(points)}): the head is far from a sphere there; read"
+        " its field with care"
     )
     return columns, [Finding("sphere", words)]
 

@@ -19,6 +19,8 @@ class Trains:
     ----------
     first, last : ndarray of int, shape (T,)
         Index of the first and last pulse.
+    parts : ndarray of int, shape (T,)
+        Declared trains that touch and count as one here; they still count one by one.
     pulses : ndarray of int, shape (T,)
     rate_hz : ndarray, shape (T,)
         The declared rate where the onsets agree within 0.1 %, else one over the shortest interval; NaN for one pulse.
@@ -32,6 +34,7 @@ class Trains:
 
     first: IntArray
     last: IntArray
+    parts: IntArray
     pulses: IntArray
     rate_hz: FloatArray
     output_milli: IntArray
@@ -59,6 +62,7 @@ def find_trains(schedule: Schedule, pattern: str | None) -> Trains:
     tolerance = float(found["relative_tolerance"])
     onset, train = schedule.onset_us, schedule.train
     joined = np.diff(onset) <= found["gap_s"] * US * (1 + tolerance)
+    renumbered = train[1:] != train[:-1]
     joined |= (train[1:] == train[:-1]) & (train[1:] != NO_TRAIN)
     starts = np.flatnonzero(np.concatenate([[True], ~joined]))
     ends = np.append(starts[1:], len(onset)) - 1
@@ -66,12 +70,17 @@ def find_trains(schedule: Schedule, pattern: str | None) -> Trains:
     first, last = starts[keep], ends[keep]
     rate, duration = _rates(schedule, first, last, joined, tolerance)
     burst = np.array(
-        [pattern is not None and is_theta_burst(schedule, int(a), int(b)) for a, b in zip(first, last, strict=True)]
+        [
+            pattern is not None and is_theta_burst(schedule, int(a), int(b), pattern)
+            for a, b in zip(first, last, strict=True)
+        ]
     )
     highest = np.array(
         [schedule.output_milli[a : b + 1].max() for a, b in zip(first, last, strict=True)], dtype=np.int64
     )
-    return Trains(first, last, last - first + 1, rate, highest, duration, burst.astype(bool))
+    changes = np.concatenate([[0], np.cumsum(renumbered & joined)])
+    parts = changes[last] - changes[first] + 1
+    return Trains(first, last, parts, last - first + 1, rate, highest, duration, burst.astype(bool))
 
 
 def _rates(
@@ -94,12 +103,17 @@ def _rates(
     return rate, np.maximum(by_count, (onset[last] - onset[first]) / US)
 
 
-def is_theta_burst(schedule: Schedule, first: int, last: int) -> bool:
-    """Say whether a train is theta burst: one intensity, whole triplets at 20 ms every 200 ms, at least ten of them."""
+def is_theta_burst(schedule: Schedule, first: int, last: int, pattern: str) -> bool:
+    """Say whether a train is the theta burst that the protocol names, pulse by pulse.
+
+    One intensity, whole triplets at 20 ms, every 200 ms, at least ten of them; exactly ten in an intermittent train.
+    """
     values = published()["theta_burst"]
     per_burst, tolerance = int(values["pulses_per_burst"]), float(published()["trains_found"]["relative_tolerance"])
     count = last - first + 1
     outputs = schedule.output_milli[first : last + 1]
+    if pattern == "intermittent_theta_burst" and count != per_burst * values["intermittent"]["bursts"]:
+        return False
     if count % per_burst or count // per_burst < values["least_bursts"] or outputs.min() != outputs.max():
         return False
     onset = schedule.onset_us[first : last + 1].reshape(-1, per_burst)
