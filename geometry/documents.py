@@ -354,8 +354,10 @@ class AlsoAccepts:
 
 
 def _from_list(value: Any) -> Any:
-    if isinstance(value, list) and any(isinstance(v, bool) or not isinstance(v, int | float) for v in value):
-        raise ValueError("expected three numbers [x, y, z]")
+    if isinstance(value, list) and (
+        len(value) != 3 or any(isinstance(v, bool) or not isinstance(v, int | float) for v in value)
+    ):
+        raise ValueError(f"expected three numbers [x, y, z], got {value}")
     return tuple(value) if isinstance(value, list) else value
 
 

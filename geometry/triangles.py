@@ -135,8 +135,8 @@ def last_crossing(origins: FloatArray, directions: FloatArray, triangles: FloatA
             q = cross(from_a, ab[None])
             v = dot(np.broadcast_to(d, q.shape), q) / determinant
             t = dot(np.broadcast_to(ac[None], q.shape), q) / determinant
-        slack = 1e-12  # an edge shared by two triangles must not let a ray slip through between them
-        hit = (u >= -slack) & (v >= -slack) & (u + v <= 1 + slack) & (t > 0)
+            slack = 1e-12  # an edge shared by two triangles must not let a ray slip through between them
+            hit = (u >= -slack) & (v >= -slack) & (u + v <= 1 + slack) & (t > 0)
         far = np.where(hit, t, -np.inf).max(axis=1)
         result[start : start + chunk] = np.where(np.isfinite(far), far, np.nan)
     return result

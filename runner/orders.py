@@ -13,9 +13,9 @@ from coilwright.geometry.draws import Draws
 from coilwright.geometry.errors import InputError
 from coilwright.geometry.frames import FloatArray, IntArray
 
-# Improving swaps are looked for among this many random partners first, then among all.
-_FIRST_PARTNERS: Final = 64
-_MOST_SWEEPS: Final = 50
+# A swap is looked for among this many random partners, in so many rounds over what still stands wrongly.
+_PARTNERS: Final = 48
+_MOST_SWEEPS: Final = 200
 
 
 @dataclass(frozen=True)
@@ -198,56 +198,64 @@ def _violations(pose: IntArray, level: IntArray, constraints: Constraints) -> In
 
 
 def _repaired(entries: Entries, constraints: Constraints, seed: int, *, fixed: bool) -> Entries:
-    """Swap entries until nothing is violated; each swap lowers the number of violations, so this ends."""
+    """Swap entries until nothing is violated: a bounded number of swaps, none of which adds a violation."""
     pose, level = entries.pose.copy(), entries.level.copy()
     draws = Draws(seed, "repair")
+    wrong = _violations(pose, level, constraints)
+    if wrong.size and fixed:
+        raise InputError(
+            f"order: {wrong.size} neighbours break apart_mm or longest_run, and this kind of order fixes every place;"
+            " say shuffled or blocks, or lower the constraint"
+        )
     for _ in range(_MOST_SWEEPS):
+        for at in wrong.tolist():
+            _swap_one(at, pose, level, entries.group, constraints, draws)
         wrong = _violations(pose, level, constraints)
         if not wrong.size:
             return Entries(pose, level, entries.group)
-        if fixed:
-            raise InputError(
-                f"order: {wrong.size} neighbours break apart_mm or longest_run, and this kind of order fixes every"
-                " place; say shuffled or blocks, or lower the constraint"
-            )
-        if not sum(_swap_one(int(at), pose, level, entries.group, constraints, draws) for at in wrong):
-            break
     raise InputError(
-        f"order: no order found that keeps apart_mm and longest_run ({len(_violations(pose, level, constraints))}"
-        " places left, no swap helps); it is not proven that there is none: try another seed, or lower the constraint"
+        f"order: no order found that keeps apart_mm and longest_run ({len(wrong)} places left after {_MOST_SWEEPS} rounds"
+        " of swaps); it is not proven that there is none: try another seed, or lower the constraint"
     )
 
 
 def _swap_one(
     at: int, pose: IntArray, level: IntArray, group: IntArray, constraints: Constraints, draws: Draws
-) -> bool:
-    """Swap entry `at` with a partner that lowers the violations around both; say whether there was one."""
+) -> None:
+    """Swap an entry that stands wrongly, or the one before it, with a partner that lowers the violations.
+
+    Where no partner lowers them, one that keeps their number is taken: that leads out of dead ends.
+    """
+    at -= int(draws.below(2, 1)[0])
     members = np.flatnonzero(group == group[at])
-    partners = members[draws.shuffled(len(members))]
-    for tried in (partners[:_FIRST_PARTNERS], partners[_FIRST_PARTNERS:]):
-        for partner in tried:
-            if _swap_helps(at, int(partner), pose, level, constraints):
-                return True
-    return False
+    partners = members[draws.below(len(members), min(len(members), _PARTNERS))]
+    sideways = None
+    for partner in partners.tolist():
+        change = _swap(at, partner, pose, level, constraints)
+        if change < 0:
+            return
+        _exchange(at, partner, pose, level)
+        if change == 0 and (pose[at], level[at]) != (pose[partner], level[partner]):
+            sideways = partner
+    if sideways is not None:
+        _exchange(at, sideways, pose, level)
 
 
-def _swap_helps(at: int, partner: int, pose: IntArray, level: IntArray, constraints: Constraints) -> bool:
+def _exchange(at: int, partner: int, pose: IntArray, level: IntArray) -> None:
+    for array in (pose, level):
+        array[[at, partner]] = array[[partner, at]]
+
+
+def _swap(at: int, partner: int, pose: IntArray, level: IntArray, constraints: Constraints) -> int:
+    """Exchange two entries and return by how much the number of violations around them changed."""
     reach = 2 + (constraints.longest_run or 0)
-    windows = [slice(max(0, k - reach), k + reach + 1) for k in sorted((at, partner))]
+    first, second = sorted((at, partner))
+    windows = [slice(max(0, k - reach), k + reach + 1) for k in (first, second)]
     if windows[1].start < windows[0].stop:
         windows = [slice(windows[0].start, windows[1].stop)]
-
-    def wrong() -> int:
-        return sum(len(_violations(pose[w], level[w], constraints)) for w in windows)
-
-    before = wrong()
-    for array in (pose, level):
-        array[[at, partner]] = array[[partner, at]]
-    if wrong() < before:
-        return True
-    for array in (pose, level):
-        array[[at, partner]] = array[[partner, at]]
-    return False
+    before = sum(len(_violations(pose[w], level[w], constraints)) for w in windows)
+    _exchange(at, partner, pose, level)
+    return sum(len(_violations(pose[w], level[w], constraints)) for w in windows) - before
 
 
 def sham_entries(pose: IntArray, share: float, seed: int) -> np.ndarray:

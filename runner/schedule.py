@@ -409,12 +409,13 @@ def _order_problems(table: dict[str, list[str]], name: str, onset: IntArray, rea
         for i, cell in enumerate(table["pulse"])
         if cell != str(i + 1)
     ][:10]
-    late = np.flatnonzero(~(np.diff(onset) > 0))
+    known = (onset >= 0).all()  # what is no number has been said already
+    late = np.flatnonzero(~(np.diff(onset) > 0)) if known else np.empty(0, dtype=np.int64)
     problems += [
         f"{name}:{i + 3}: onset_s: {table['onset_s'][i + 1]} is not after {table['onset_s'][i]}; onsets rise"
         for i in late[:10]
     ]
-    if len(onset) and onset[0] != 0:
+    if known and onset[0] != 0:
         problems.append(f"{name}:2: onset_s: the first onset is {table['onset_s'][0]}; onsets count from 0")
     blocked = {pose for pose, reached in reachable.items() if not reached}
     problems += [
