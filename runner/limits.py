@@ -33,6 +33,8 @@ RULES: Final = (
     "threshold_method",
     "sham_method",
 )
+# A tolerance of 0.1 % is not decided by the last bit of a double.
+ROUNDING: Final = 1e-9
 NOT_CHECKED: Final = (
     "screening for contraindications (metal, implants, seizure history, pregnancy)",
     "medication, sleep, alcohol and other things that lower the seizure threshold",
@@ -111,7 +113,7 @@ def at_most(rule: str, worst: float, limit: float | None, *, tolerance: float = 
     """Hold a value against a largest one; a limit that is not set makes the rule incomplete."""
     if limit is None:
         return check(rule, "incomplete", worst=worst, **more)
-    verdict: Verdict = "within" if worst <= limit * (1 + tolerance) else "exceeded"
+    verdict: Verdict = "within" if worst <= limit * (1 + tolerance) + ROUNDING * tolerance else "exceeded"
     return check(rule, verdict, limit=limit, worst=worst, margin=limit - worst, **more)
 
 
@@ -119,7 +121,7 @@ def at_least(rule: str, worst: float, limit: float | None, *, tolerance: float =
     """Hold a value against a smallest one; a limit that is not set makes the rule incomplete."""
     if limit is None:
         return check(rule, "incomplete", worst=worst, **more)
-    verdict: Verdict = "within" if worst >= limit * (1 - tolerance) else "exceeded"
+    verdict: Verdict = "within" if worst >= limit * (1 - tolerance) - ROUNDING * tolerance else "exceeded"
     return check(rule, verdict, limit=limit, worst=worst, margin=worst - limit, **more)
 
 

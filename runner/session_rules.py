@@ -12,6 +12,7 @@ from .heat import temperatures
 from .ledger import pulses_since
 from .limits import Check, Verdict, at_least, at_most, check, nothing_to_check, published
 from .schedule import MILLI, NO_TRAIN, SHAM, US
+from .trains import train_gap_us
 
 
 def _not_set(item: Check, key: str) -> Check:
@@ -37,9 +38,7 @@ def interval(case: Case) -> Check:
     gaps = np.diff(schedule.onset_us)
     single = schedule.train == NO_TRAIN
     # Inside a declared train a gap of more than 2 s is no train's gap: a shared number excuses no interval.
-    found = published()["trains_found"]
-    loose = gaps > found["gap_s"] * US * (1 + found["relative_tolerance"])
-    same = (schedule.train[1:] == schedule.train[:-1]) & loose
+    same = (schedule.train[1:] == schedule.train[:-1]) & (gaps > train_gap_us())
     rows = np.flatnonzero(single[:-1] | single[1:] | same)
     if not rows.size:
         return nothing_to_check("interval", "no interval next to a single pulse in this schedule")

@@ -183,7 +183,7 @@ def train_intensity(case: Case) -> Check:
     if item.verdict == "within":
         return item
     approval = _approval(case, "train_intensity", trains)
-    if approval:
+    if approval and percent <= approval.up_to * MILLI:
         return with_approval(
             case, at_most("train_intensity", percent / MILLI, max(limit, approval.up_to), pulse=item.pulse), approval
         )

@@ -49,6 +49,12 @@ class Trains:
         return Trains(*(getattr(self, name)[keep] for name in self.__dataclass_fields__))
 
 
+def train_gap_us() -> int:
+    """Return the longest gap inside a train, us: 2 s with the tolerance of spacings."""
+    found = published()["trains_found"]
+    return round(found["gap_s"] * US * (1 + found["relative_tolerance"]))
+
+
 def find_trains(schedule: Schedule, pattern: str | None) -> Trains:
     """Find the trains of a schedule; trains that touch each other count as one.
 
@@ -61,7 +67,7 @@ def find_trains(schedule: Schedule, pattern: str | None) -> Trains:
     found = published()["trains_found"]
     tolerance = float(found["relative_tolerance"])
     onset, train = schedule.onset_us, schedule.train
-    joined = np.diff(onset) <= found["gap_s"] * US * (1 + tolerance)
+    joined = np.diff(onset) <= train_gap_us()
     renumbered = train[1:] != train[:-1]
     joined |= (train[1:] == train[:-1]) & (train[1:] != NO_TRAIN)
     starts = np.flatnonzero(np.concatenate([[True], ~joined]))
