@@ -249,12 +249,21 @@ def validate(document: Document, model: type[AnyModel], path: Path = ()) -> AnyM
         known = _all_keys(model.model_json_schema())
         details = _innermost(error.errors(include_url=False))
         for detail in details:
-            at = (*path, *detail["loc"])
+            at = _as_written(document, path, detail["loc"])
             if not any(other[: len(at)] == at for other in said):
                 lines.append((document.place(at), _explain(document, at, detail, known)))
     if lines:
         raise InputError(*dict.fromkeys(line for _, line in sorted(lines, key=lambda item: item[0])))
     return checked
+
+
+def _as_written(document: Document, start: Path, keys: Path) -> Path:
+    """A value's path without the index that a before-validator adds when it makes one value a list of one."""
+    path = start
+    for key in keys:
+        if not (isinstance(key, int) and (*path, key) not in document.places):
+            path = (*path, key)
+    return path
 
 
 def _innermost(details: list[Any]) -> list[Any]:

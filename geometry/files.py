@@ -123,7 +123,7 @@ def write_files(folder: Path, files: Mapping[str, bytes], *, force: bool = False
 def _would_change(path: Path, data: bytes) -> bool:
     try:
         return path.read_bytes() != data
-    except FileNotFoundError:
+    except (FileNotFoundError, NotADirectoryError):
         return False
     except OSError:
         return True

@@ -1,4 +1,4 @@
-"""PLY, STL, OBJ (trimesh) and GIfTI (nibabel) to one `Surface`: RAS, millimetres, vertex order kept.
+"""PLY, STL, OBJ (trimesh) and GIfTI (nibabel), packed by gzip or not, to one `Surface`: RAS, mm, vertex order kept.
 
 GIfTI coordinates are taken through the file's own coordinate-system matrix. STL has no shared vertices; equal ones are
 joined, so that a closed STL reads as a closed surface.
@@ -6,6 +6,7 @@ joined, so that a closed STL reads as a closed surface.
 
 from __future__ import annotations
 
+import gzip
 import io
 from pathlib import Path
 from typing import Any
@@ -27,7 +28,7 @@ def parse_surface(data: bytes, name: str, *, axes: str = "RAS", unit: str = "mm"
     data : bytes
         The file.
     name : str
-        Its name: the suffix says the format, messages show it.
+        Its name: the suffix (``.gz`` after it or not) says the format, messages show it.
     axes, unit : str
         Of the file; converted to RAS and mm here and nowhere else.
 
@@ -36,12 +37,14 @@ def parse_surface(data: bytes, name: str, *, axes: str = "RAS", unit: str = "mm"
     InputError
         An unknown suffix, a file that is damaged or holds no triangles.
     """
-    suffix = Path(name).suffix.lower()
+    packed = Path(name).suffix.lower() == ".gz"
+    suffix = Path(Path(name).stem if packed else name).suffix.lower()
     if suffix not in MESH_SUFFIXES:
         raise InputError(f"{name}: expected a surface ({' '.join(MESH_SUFFIXES)}), got {suffix or 'no suffix'!r}")
     if not data:
         raise InputError(f"{name}: the file is empty")
     try:
+        data = gzip.decompress(data) if packed else data
         vertices, faces = _gifti(data) if suffix == ".gii" else _trimesh(data, suffix)
     except InputError:
         raise

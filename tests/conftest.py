@@ -99,6 +99,13 @@ def changed(base: dict[str, Any], changes: dict[str, Any]) -> dict[str, Any]:
     return result
 
 
+class _Plain(yaml.SafeDumper):
+    """Writes every value out: an alias is refused by the product, as it should be."""
+
+    def ignore_aliases(self, data: Any) -> bool:  # noqa: ARG002 - PyYAML's face
+        return True
+
+
 @dataclass
 class Study:
     """A folder with a scalp (a sphere of 90 mm), a protocol and a lab file."""
@@ -110,8 +117,8 @@ class Study:
         return self.folder / "protocol.yaml"
 
     def write(self, protocol: dict[str, Any] | None = None, lab: dict[str, Any] | None = None) -> Path:
-        self.protocol.write_text(yaml.safe_dump(changed(PROTOCOL, protocol or {}), sort_keys=False))
-        (self.folder / "lab.yaml").write_text(yaml.safe_dump(changed(LAB, lab or {}), sort_keys=False))
+        self.protocol.write_text(yaml.dump(changed(PROTOCOL, protocol or {}), Dumper=_Plain, sort_keys=False))
+        (self.folder / "lab.yaml").write_text(yaml.dump(changed(LAB, lab or {}), Dumper=_Plain, sort_keys=False))
         return self.protocol
 
 
