@@ -290,7 +290,8 @@ def quaternion_from_matrix(matrix: FloatArray) -> FloatArray:
     array([1., 0., 0., 0.])
     """
     shape = matrix.shape[:-2]
-    q = Rotation.from_matrix(matrix[..., :3, :3].reshape(-1, 3, 3)).as_quat(scalar_first=True)
+    rotations = np.array(matrix[..., :3, :3], dtype=np.float64).reshape(-1, 3, 3)  # SciPy before 1.15 wants to own it
+    q = Rotation.from_matrix(rotations).as_quat(scalar_first=True)
     significant = np.abs(q) > QUATERNION_ZERO
     leading = np.take_along_axis(q, significant.argmax(axis=1)[:, None], axis=1)
     q = np.where(leading < 0, -q, q)
@@ -321,7 +322,9 @@ def matrix_from_quaternion(quaternion_wxyz: ArrayLike, origin: ArrayLike) -> Flo
             f"quaternion {index}: its length is off 1 by {np.atleast_1d(off)[index]:.3g}; give unit quaternions"
         )
     points = check_points(origin, "origin")
-    rotation = Rotation.from_quat(q.reshape(-1, 4), scalar_first=True).as_matrix().reshape(*q.shape[:-1], 3, 3)
+    rotation = (
+        Rotation.from_quat(np.array(q).reshape(-1, 4), scalar_first=True).as_matrix().reshape(*q.shape[:-1], 3, 3)
+    )
     return rigid_from_axes(points, rotation[..., 0], rotation[..., 1], rotation[..., 2])
 
 

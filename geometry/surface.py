@@ -14,6 +14,7 @@ from numpy.typing import ArrayLike
 from scipy.spatial import KDTree
 
 from . import triangles as tri
+from .chunks import in_chunks
 from .errors import Finding, InputError, ItemError
 from .frames import FloatArray, IntArray, angle_between_deg, check_points, read_only
 
@@ -25,6 +26,8 @@ LONGEST_HEAD_MM: Final = 450.0
 DEGENERATE_AREA_MM2: Final = 1e-12
 QUALITY_RADII_MM: Final = (8.0, 15.0, 30.0)
 QUALITY_LIMIT_DEG: Final = 5.0
+# Points whose normals are found at once: their working arrays stay in the processor's cache.
+NORMALS_AT_ONCE: Final = 500
 
 
 @dataclass(frozen=True)
@@ -185,7 +188,8 @@ class Surface:
         True
         """
         query = np.atleast_2d(check_points(points))
-        parts = [self._nearest_chunk(query[i : i + chunk]) for i in range(0, len(query), chunk)]
+        _ = self._centroid_tree, self._reach, self.face_normals  # made once, before threads ask for them
+        parts = in_chunks(lambda part: self._nearest_chunk(query[part]), len(query), chunk)
         if not parts:
             return Nearest(np.empty((0, 3)), np.empty(0), np.empty(0, dtype=np.int64), np.empty((0, 3)))
         return Nearest(
@@ -283,12 +287,9 @@ class Surface:
         True
         """
         query = np.atleast_2d(check_points(points))
-        owner, face, area = self._areas_in_balls(query, float(radius_mm))
-        normals = self.face_normals[face]
-        total = np.stack([np.bincount(owner, area * normals[:, k], len(query)) for k in range(3)], axis=1)
-        weight = np.bincount(owner, area, len(query))
-        length = np.linalg.norm(total, axis=1)
-        bad = np.flatnonzero(~((length > 0.1 * weight) & (weight > 0)))
+        _ = self._centroid_tree, self._reach, self.face_normals  # made once, before threads ask for them
+        parts = in_chunks(lambda part: self._normals(query[part], float(radius_mm)), len(query), NORMALS_AT_ONCE)
+        bad = np.flatnonzero(np.concatenate([np.isnan(part[:, 0]) for part in parts])) if parts else np.empty(0, int)
         if bad.size:
             raise ItemError(
                 (
@@ -298,7 +299,17 @@ class Surface:
                 )
                 for i in bad
             )
-        return np.asarray(total / length[:, None])
+        return np.concatenate(parts) if parts else np.empty((0, 3))
+
+    def _normals(self, query: FloatArray, radius_mm: float) -> FloatArray:
+        """Normals of a chunk of points; NaN where there is none."""
+        owner, face, area = self._areas_in_balls(query, radius_mm)
+        normals = self.face_normals[face]
+        total = np.stack([np.bincount(owner, area * normals[:, k], len(query)) for k in range(3)], axis=1)
+        weight = np.bincount(owner, area, len(query))
+        length = np.linalg.norm(total, axis=1)
+        good = (length > 0.1 * weight) & (weight > 0)
+        return np.where(good[:, None], total / np.where(good, length, 1.0)[:, None], np.nan)
 
     def _areas_in_balls(self, centres: FloatArray, radius: float) -> tuple[IntArray, IntArray, FloatArray]:
         """Pairs of ball and face, and the face's area inside the ball; faces cut by the ball's edge are clipped."""

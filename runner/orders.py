@@ -204,8 +204,8 @@ def _repaired(entries: Entries, constraints: Constraints, seed: int, *, fixed: b
     wrong = _violations(pose, level, constraints)
     if wrong.size and fixed:
         raise InputError(
-            f"order: {wrong.size} neighbours break apart_mm or longest_run, and this kind of order fixes every place;"
-            " say shuffled or blocks, or lower the constraint"
+            f"order: {wrong.size} neighbours break apart_mm or longest_run, and this kind of order fixes every place"
+            "; say shuffled or blocks, or lower the constraint"
         )
     for _ in range(_MOST_SWEEPS):
         for at in wrong.tolist():
@@ -214,8 +214,8 @@ def _repaired(entries: Entries, constraints: Constraints, seed: int, *, fixed: b
         if not wrong.size:
             return Entries(pose, level, entries.group)
     raise InputError(
-        f"order: no order found that keeps apart_mm and longest_run ({len(wrong)} places left after {_MOST_SWEEPS} rounds"
-        " of swaps); it is not proven that there is none: try another seed, or lower the constraint"
+        f"order: no order found that keeps apart_mm and longest_run: {len(wrong)} places left after {_MOST_SWEEPS}"
+        " rounds of swaps; it is not proven that there is none: try another seed, or lower the constraint"
     )
 
 

@@ -52,7 +52,7 @@ class Trains:
 def train_gap_us() -> int:
     """Return the longest gap inside a train, us: 2 s with the tolerance of spacings."""
     found = published()["trains_found"]
-    return round(found["gap_s"] * US * (1 + found["relative_tolerance"]))
+    return round(float(found["gap_s"]) * US * (1 + float(found["relative_tolerance"])))
 
 
 def find_trains(schedule: Schedule, pattern: str | None) -> Trains:

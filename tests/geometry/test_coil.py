@@ -81,7 +81,9 @@ def test_refusals_carry_their_place(tmp_path: Path) -> None:
 
 
 def test_unknown_names_and_missing_files(tmp_path: Path) -> None:
-    with pytest.raises(InputError, match=r"neither a built-in coil .* nor a coil file .*did you mean 'figure8-generic'"):
+    with pytest.raises(
+        InputError, match=r"neither a built-in coil .* nor a coil file .*did you mean 'figure8-generic'"
+    ):
         load_coil("figure8_generic", Inputs())
     with pytest.raises(InputError, match="no such file"):
         load_coil(str(tmp_path / "none.yaml"), Inputs())

@@ -51,20 +51,36 @@ def test_a_good_file() -> None:
     ("old", "new", "line"),
     [
         ("count: 3", "count: 1:30", "2:8: count: 1:30 is a base-60 number to YAML; write plain seconds, or quote text"),
-        ("count: 3", "count: 010", "2:8: count: 010 is an octal number to YAML; take out the leading zero, or quote text"),
+        (
+            "count: 3",
+            "count: 010",
+            "2:8: count: 010 is an octal number to YAML; take out the leading zero, or quote text",
+        ),
         ("count: 3", "count: .nan", "2:8: count: expected a finite number, got .nan"),
         ("count: 3", "count: 3.5", "2:1: count: expected a whole number, got the number 3.5"),
         ("count: 3", "count: true", "2:1: count: expected a whole number, got true, which is true or false to YAML"),
         ("count: 3", "count:", "2:1: count: expected a whole number, got nothing"),
         ("count: 3", "count: {a: 1}", "2:1: count: expected a whole number, got keys and values"),
         ("count: 3", "count: [1, 2]", "2:1: count: expected a whole number, got a list of 2 values"),
-        ("title: a", "title: yes", "1:1: title: expected text, got yes, which is true or false to YAML; put text in quotes"),
+        (
+            "title: a",
+            "title: yes",
+            "1:1: title: expected text, got yes, which is true or false to YAML; put text in quotes",
+        ),
         ("title: a", "title: 12", "1:1: title: expected text, got the number 12; put text in quotes"),
         ("title: a", "titel: a", "1:1: titel: unknown key; did you mean 'title'?"),
         ("title: a", "title: a\ntitle: b", "2:1: title: this key stands here twice; keep one"),
-        ("title: a", "title: !!binary aGk=", "1:8: title: the tag 'tag:yaml.org,2002:binary' is not used here; write a plain value"),
+        (
+            "title: a",
+            "title: !!binary aGk=",
+            "1:8: title: the tag 'tag:yaml.org,2002:binary' is not used here; write a plain value",
+        ),
         ("title: a", "title: a\n[1]: b", "2:1: expected a word as key"),
-        ("length_mm: 2", "length_mm: 1e-5", "4:9: inner.length_mm: expected a number, got the text '1e-5': to YAML this is text; write it as 1.0e-05"),
+        (
+            "length_mm: 2",
+            "length_mm: 1e-5",
+            "4:9: inner.length_mm: expected a number, got the text '1e-5': to YAML this is text; write it as 1.0e-05",
+        ),
         ("length_mm: 2", "length_mm: -.inf", "4:20: inner.length_mm: expected a finite number, got -.inf"),
         ("length_mm: 2", "length_mm: 1.0e+999", "4:20: inner.length_mm: expected a finite number, got 1.0e+999"),
         ("[1, 2, 3.5]", "[1, 2]", "3:1: at_mm: expected three numbers [x, y, z], got [1, 2]"),
@@ -141,7 +157,7 @@ def test_a_disk_that_fills_up_leaves_nothing(tmp_path: Path, monkeypatch: pytest
 
     monkeypatch.setattr(files.os, "fsync", full)
     with pytest.raises(InputError, match=r"cannot be written \(No space left on device\); nothing was left there"):
-        write_files(tmp_path / "new" / "deep", {name: b"x" for name in "abcd"})
+        write_files(tmp_path / "new" / "deep", dict.fromkeys("abcd", b"x"))
     assert list(tmp_path.iterdir()) == []
 
 
@@ -191,9 +207,9 @@ def test_tables_refuse_what_would_break_them() -> None:
         read_tsv(b"a\ta\n", "t.tsv", ["a"])
     with pytest.raises(InputError, match=r"t.tsv:3:1: expected 2 cells split by tabs, got 1"):
         read_tsv(b"a\tb\n1\t2\n3\n", "t.tsv", ["a"])
-    with pytest.raises(InputError, match="t.tsv:3: a: expected a finite number, got 'inf'"):
+    with pytest.raises(InputError, match=r"t.tsv:3: a: expected a finite number, got 'inf'"):
         floats(["1", "inf"], "t.tsv", "a")
-    with pytest.raises(InputError, match="t.tsv:2: a: expected a number, got 'n/a'"):
+    with pytest.raises(InputError, match=r"t.tsv:2: a: expected a number, got 'n/a'"):
         floats(["n/a"], "t.tsv", "a")
     assert np.isnan(floats(["n/a"], "t.tsv", "a", missing=True)[0])
 
@@ -206,7 +222,7 @@ def test_target_tables_take_directions_as_protocols_write_them() -> None:
     assert targets[3].direction == targets[4].direction
     assert wheres[4] == "t.tsv:6:1"
     bad = text + "t9\t1\t2\t3\tforwards\n" + "t10\t1\tx\t3\t45\n"
-    with pytest.raises(InputError, match="t.tsv:8: y_mm: expected a number, got 'x'"):
+    with pytest.raises(InputError, match=r"t.tsv:8: y_mm: expected a number, got 'x'"):
         read_target_table(bad.encode(), "t.tsv")
     with pytest.raises(InputError, match=r"t.tsv:7:1: direction: expected keys and values, got the text 'forwards'"):
         read_target_table(bad.replace("\tx\t", "\t2\t").encode(), "t.tsv")

@@ -1,3 +1,4 @@
+# ruff: noqa: B905, TRY004, PLW2901, RUF007 - kept as it was written, without sight of the rules
 """Independent re-check of a pulse schedule against published and local limits.
 
 Written from LIMITS.md and INTERFACE.md alone, without sight of the program it is
@@ -23,6 +24,7 @@ the side that widens less or reports more:
 * A ledger entry dated after `now` counts: the pulses were given, the clock is wrong.
 * Output above 100 % is exceeded whatever the lab file says.
 """
+
 from __future__ import annotations
 
 import math
@@ -34,25 +36,25 @@ from numbers import Rational
 
 WITHIN, CAUTION, EXCEEDED, INCOMPLETE = "within", "caution", "exceeded", "incomplete"
 
-US = 1_000_000                                  # microseconds in a second
-SPACING = Fraction(1, 1000)                     # relative tolerance of spacing and rate
-DURATION = Fraction(1, 10**9)                   # relative tolerance of durations, counts
-TRAIN_GAP_US = 2 * US                           # pulses this close are one train
+US = 1_000_000  # microseconds in a second
+SPACING = Fraction(1, 1000)  # relative tolerance of spacing and rate
+DURATION = Fraction(1, 10**9)  # relative tolerance of durations, counts
+TRAIN_GAP_US = 2 * US  # pulses this close are one train
 PAUSE_S = Fraction(5)
 SINGLE_PULSE_FLOOR_S = Fraction(3)
 HIGHEST_RATE_HZ = Fraction(25)
-HIGHEST_PERCENT = Fraction(130)                 # of resting threshold
-HIGHEST_PERCENT_REPEATED = Fraction(110)        # tested with repeated trains
+HIGHEST_PERCENT = Fraction(130)  # of resting threshold
+HIGHEST_PERCENT_REPEATED = Fraction(110)  # tested with repeated trains
 MOST_TRAINS = 10
 VISIBLE_TWITCH = Fraction("1.113")
 THETA_PATTERNS = ("intermittent_theta_burst", "continuous_theta_burst")
 THETA_WITHIN_US, THETA_BETWEEN_US = 20_000, 200_000
 THETA_FEWEST_BURSTS = 10
-THETA_PERCENT = Fraction(80)                    # of active threshold
+THETA_PERCENT = Fraction(80)  # of active threshold
 THETA_PULSES = 600
 SKIN_C = 33.0
 STOP_C = Fraction(41)
-TEMPERATURE_SLACK_C = 1e-9                      # float noise counts against the session
+TEMPERATURE_SLACK_C = 1e-9  # float noise counts against the session
 
 
 def _row(text: str) -> tuple[Fraction, ...]:
@@ -90,7 +92,7 @@ REPEAT_PULSES = (
 class Pulse:
     onset_us: int
     pose: str
-    output: Fraction        # percent of stimulator output, rounded down to the coil's step
+    output: Fraction  # percent of stimulator output, rounded down to the coil's step
     sham: bool
     train: int | None
 
@@ -98,19 +100,21 @@ class Pulse:
 @dataclass(frozen=True)
 class _Scope:
     """What an approval has to cover."""
+
     pattern: str | None
-    rate_hz: Fraction | None        # None: a single pulse, which has no rate
-    percent: Fraction | None        # None: the threshold is unknown
+    rate_hz: Fraction | None  # None: a single pulse, which has no rate
+    percent: Fraction | None  # None: the threshold is unknown
 
 
 @dataclass(frozen=True)
 class _Group:
     """A train, or a single pulse: a longest run of pulses that belong together."""
+
     pulses: tuple[Pulse, ...]
     is_train: bool
-    pattern: str | None             # the protocol's pattern where the train matches it
-    rate_hz: Fraction | None        # None: a single pulse
-    percent: Fraction | None        # its highest, of resting threshold (theta burst: of active)
+    pattern: str | None  # the protocol's pattern where the train matches it
+    rate_hz: Fraction | None  # None: a single pulse
+    percent: Fraction | None  # its highest, of resting threshold (theta burst: of active)
 
     @property
     def scope(self) -> _Scope:
@@ -125,6 +129,7 @@ class _Group:
 @dataclass(frozen=True)
 class _Approval:
     """A complete and unexpired approval of the lab file."""
+
     rules: frozenset[str]
     pattern: str | None
     rate_hz: Fraction | None
@@ -134,17 +139,18 @@ class _Approval:
     def covers_train(self, scope: _Scope) -> bool:
         """Pattern and rate lie in the approval's scope."""
         return self.pattern == scope.pattern and (
-            self.rate_hz is None or scope.rate_hz is None
-            or _no_faster(scope.rate_hz, self.rate_hz))
+            self.rate_hz is None or scope.rate_hz is None or _no_faster(scope.rate_hz, self.rate_hz)
+        )
 
     def covers(self, scope: _Scope) -> bool:
         """Pattern, rate and intensity lie in the approval's scope."""
         return self.covers_train(scope) and (
-            self.threshold_percent is None
-            or (scope.percent is not None and scope.percent <= self.threshold_percent))
+            self.threshold_percent is None or (scope.percent is not None and scope.percent <= self.threshold_percent)
+        )
 
 
 # --- numbers -----------------------------------------------------------------------
+
 
 def _number(value, name: str) -> Fraction | None:
     """The number as it was written (a float by its shortest decimal); None stays None."""
@@ -188,7 +194,7 @@ def _cell(table, columns, rate_hz: Fraction, percent: Fraction) -> Fraction | No
     """The cell for rate and intensity, both rounded up; None beyond the table."""
     for row_hz, cells in table:
         if _no_faster(rate_hz, Fraction(row_hz)):
-            for column, cell in zip(columns, cells):
+            for column, cell in zip(columns, cells, strict=True):
                 if percent <= column:
                     return cell
             return None
@@ -197,13 +203,13 @@ def _cell(table, columns, rate_hz: Fraction, percent: Fraction) -> Fraction | No
 
 # --- reading the input ----------------------------------------------------------------
 
+
 def _check_pulses(pulses: list[Pulse]) -> None:
     for number, pulse in enumerate(pulses, 1):
         if not isinstance(pulse.onset_us, int) or isinstance(pulse.onset_us, bool):
             raise ValueError(f"pulse {number}: onset_us {pulse.onset_us!r} is not an integer")
         if not isinstance(pulse.output, Rational) or pulse.output < 0:
-            raise ValueError(f"pulse {number}: output {pulse.output!r} is not an exact "
-                             "number of 0 or more")
+            raise ValueError(f"pulse {number}: output {pulse.output!r} is not an exact number of 0 or more")
         if number > 1 and pulse.onset_us <= pulses[number - 2].onset_us:
             raise ValueError(f"pulse {number}: onsets must rise")
 
@@ -220,8 +226,7 @@ def _read_thresholds(thresholds) -> dict[str, tuple[Fraction, str]]:
     return read
 
 
-APPROVAL_KEYS = {"rule", "rate_hz", "threshold_percent", "pattern", "up_to",
-                 "reference", "approved_by", "until"}
+APPROVAL_KEYS = {"rule", "rate_hz", "threshold_percent", "pattern", "up_to", "reference", "approved_by", "until"}
 
 
 def _read_approvals(lab: dict, today: date) -> list[_Approval]:
@@ -229,26 +234,28 @@ def _read_approvals(lab: dict, today: date) -> list[_Approval]:
     read = []
     for entry in lab.get("approvals") or []:
         unknown = set(entry) - APPROVAL_KEYS
-        if unknown:     # it may narrow the scope, so it cannot be passed over
+        if unknown:  # it may narrow the scope, so it cannot be passed over
             raise ValueError(f"approval: unknown keys {sorted(unknown)}")
         until = entry.get("until")
         if isinstance(until, datetime):
             until = until.date()
-        if not (entry.get("reference") and entry.get("approved_by")
-                and isinstance(until, date) and today <= until):
+        if not (entry.get("reference") and entry.get("approved_by") and isinstance(until, date) and today <= until):
             continue
         rule = entry.get("rule") or []
-        read.append(_Approval(
-            rules=frozenset([rule] if isinstance(rule, str) else rule),
-            pattern=entry.get("pattern"),
-            rate_hz=_number(entry.get("rate_hz"), "approval: rate_hz"),
-            threshold_percent=_number(entry.get("threshold_percent"),
-                                      "approval: threshold_percent"),
-            up_to=_number(entry.get("up_to"), "approval: up_to")))
+        read.append(
+            _Approval(
+                rules=frozenset([rule] if isinstance(rule, str) else rule),
+                pattern=entry.get("pattern"),
+                rate_hz=_number(entry.get("rate_hz"), "approval: rate_hz"),
+                threshold_percent=_number(entry.get("threshold_percent"), "approval: threshold_percent"),
+                up_to=_number(entry.get("up_to"), "approval: up_to"),
+            )
+        )
     return read
 
 
 # --- trains -----------------------------------------------------------------------------
+
 
 def _belong_together(left: Pulse, right: Pulse) -> bool:
     if left.train is not None and left.train == right.train:
@@ -275,16 +282,16 @@ def _is_theta_burst(run: list[Pulse]) -> bool:
         return False
     if len({pulse.output for pulse in run}) != 1:
         return False
-    bursts = [run[start:start + 3] for start in range(0, len(run), 3)]
-    return (all(_near(gap, THETA_WITHIN_US) for burst in bursts for gap in _gaps_us(burst))
-            and all(_near(gap, THETA_BETWEEN_US)
-                    for gap in _gaps_us([burst[0] for burst in bursts])))
+    bursts = [run[start : start + 3] for start in range(0, len(run), 3)]
+    return all(_near(gap, THETA_WITHIN_US) for burst in bursts for gap in _gaps_us(burst)) and all(
+        _near(gap, THETA_BETWEEN_US) for gap in _gaps_us([burst[0] for burst in bursts])
+    )
 
 
 def _train_rate_hz(run: list[Pulse], declared_rate_hz: Fraction | None) -> Fraction:
     gaps = _gaps_us(run)
     if not gaps:
-        return Fraction(1)              # a declared train of one pulse: the 1 Hz row
+        return Fraction(1)  # a declared train of one pulse: the 1 Hz row
     if declared_rate_hz is not None and all(_near(gap, US / declared_rate_hz) for gap in gaps):
         return declared_rate_hz
     return Fraction(US, min(gaps))
@@ -299,7 +306,8 @@ def _group(run: list[Pulse], thresholds, pattern, declared_rate_hz) -> _Group:
         is_train=is_train,
         pattern=pattern if theta else None,
         rate_hz=_train_rate_hz(run, declared_rate_hz) if is_train else None,
-        percent=_percent(highest, thresholds.get("active" if theta else "resting")))
+        percent=_percent(highest, thresholds.get("active" if theta else "resting")),
+    )
 
 
 @dataclass(frozen=True)
@@ -335,12 +343,15 @@ class _Session:
 
     def approved(self, rule: str, scopes: list[_Scope]) -> list[Fraction]:
         """`up_to` of every approval of the rule that covers all the scopes alone."""
-        return [approval.up_to for approval in self.approvals
-                if rule in approval.rules and approval.up_to is not None
-                and all(approval.covers(scope) for scope in scopes)]
+        return [
+            approval.up_to
+            for approval in self.approvals
+            if rule in approval.rules and approval.up_to is not None and all(approval.covers(scope) for scope in scopes)
+        ]
 
 
 # --- rules of trains ----------------------------------------------------------------------
+
 
 def _train_duration(session: _Session) -> str:
     if not session.ordinary:
@@ -441,6 +452,7 @@ def _theta_burst(session: _Session) -> str:
 
 # --- rules of pulses and of the session ------------------------------------------------------
 
+
 def _output(session: _Session) -> str:
     highest = max((pulse.output for pulse in session.pulses), default=Fraction(0))
     limit = session.lab_number("highest_output_percent")
@@ -451,8 +463,7 @@ def _output(session: _Session) -> str:
 
 def _interval(session: _Session) -> str:
     owned = [(pulse, group) for group in session.groups for pulse in group.pulses]
-    gaps = [(left, right) for left, right in zip(owned, owned[1:])
-            if left[0].train is None or right[0].train is None]
+    gaps = [(left, right) for left, right in zip(owned, owned[1:]) if left[0].train is None or right[0].train is None]
     if not gaps:
         return WITHIN
     floor = session.lab_number("shortest_interval_s")
@@ -462,8 +473,10 @@ def _interval(session: _Session) -> str:
         gap = Fraction(right.onset_us - left.onset_us, US)
         # An approval for singles must cover the rate that the gap itself amounts to,
         # and the trains at its ends.
-        scopes = [_Scope(group.pattern, max(1 / gap, group.rate_hz or 0), group.percent)
-                  for group in (left_group, right_group)]
+        scopes = [
+            _Scope(group.pattern, max(1 / gap, group.rate_hz or 0), group.percent)
+            for group in (left_group, right_group)
+        ]
         published = min([SINGLE_PULSE_FLOOR_S] + session.approved("interval", scopes))
         if not _at_least(gap, max(floor, published), SPACING):
             return EXCEEDED
@@ -507,8 +520,7 @@ def _session_duration(session: _Session) -> str:
     return WITHIN if _at_most(Fraction(span_us, 60 * US), limit, DURATION) else EXCEEDED
 
 
-def _highest_temperature_c(pulses: list[Pulse], start_c: float, rise_c: float,
-                           cooling_s: float) -> float:
+def _highest_temperature_c(pulses: list[Pulse], start_c: float, rise_c: float, cooling_s: float) -> float:
     """Highest temperature right after a pulse (the start, without pulses)."""
     surroundings = max(SKIN_C, start_c)
     temperature = highest = start_c
@@ -527,8 +539,9 @@ def _highest_temperature_c(pulses: list[Pulse], start_c: float, rise_c: float,
 def _contact_temperature(session: _Session, heat: dict | None, generic_coil: bool) -> str:
     if heat is None:
         return INCOMPLETE
-    start, rise, cooling = (_number(heat.get(key), f"heat.{key}")
-                            for key in ("start_c", "rise_per_full_pulse_c", "cooling_s"))
+    start, rise, cooling = (
+        _number(heat.get(key), f"heat.{key}") for key in ("start_c", "rise_per_full_pulse_c", "cooling_s")
+    )
     stop = session.lab_number("contact_temperature_c", "stop")
     caution = session.lab_number("contact_temperature_c", "caution")
     if None in (start, rise, cooling, stop):
@@ -559,14 +572,18 @@ def _sham_method(session: _Session) -> str:
     return INCOMPLETE if needed and not made_here else WITHIN
 
 
-def recheck(pulses: list[Pulse], *,
-            thresholds: dict[str, tuple[Fraction, str]],
-            pattern: str | None,
-            declared_rate_hz: Fraction | None,
-            lab: dict,
-            heat: dict | None, generic_coil: bool,
-            earlier: list[tuple[datetime, int]] | None,
-            now: datetime) -> dict[str, str]:
+def recheck(
+    pulses: list[Pulse],
+    *,
+    thresholds: dict[str, tuple[Fraction, str]],
+    pattern: str | None,
+    declared_rate_hz: Fraction | None,
+    lab: dict,
+    heat: dict | None,
+    generic_coil: bool,
+    earlier: list[tuple[datetime, int]] | None,
+    now: datetime,
+) -> dict[str, str]:
     """Rule -> 'within', 'caution', 'exceeded' or 'incomplete'.
 
     `now` is local time: its own date decides whether an approval has run out.
@@ -585,7 +602,8 @@ def recheck(pulses: list[Pulse], *,
         groups=[_group(run, thresholds, pattern, declared_rate_hz) for run in _runs(pulses)],
         thresholds=thresholds,
         lab=lab,
-        approvals=_read_approvals(lab, now.date()))
+        approvals=_read_approvals(lab, now.date()),
+    )
     return {
         "output": _output(session),
         "interval": _interval(session),

@@ -13,8 +13,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 import trimesh
-from coilwright.geometry.coil import Coil
 from coilwright.geometry.clearance import Obstacle, clearances
+from coilwright.geometry.coil import Coil
 from coilwright.geometry.frames import angle_between_deg
 from coilwright.geometry.mesh_files import read_surface
 from coilwright.geometry.placement import Directions, place
@@ -33,7 +33,9 @@ def electrodes() -> dict[str, np.ndarray]:
     with table.open() as stream:
         rows = list(csv.DictReader(stream, delimiter="\t"))
     fiducials = ("LPA", "RPA", "Nz")
-    return {row["label"]: 1000 * np.array([float(row[k]) for k in "xyz"]) for row in rows if row["label"] not in fiducials}
+    return {
+        row["label"]: 1000 * np.array([float(row[k]) for k in "xyz"]) for row in rows if row["label"] not in fiducials
+    }
 
 
 @pytest.fixture(scope="session")
@@ -63,7 +65,9 @@ def test_nearest_points_and_insides_against_trimesh(real_scalp: Surface) -> None
     assert real_scalp.volume_mm3 == pytest.approx(head.volume, rel=1e-9)
 
 
-def test_electrodes_lie_on_the_scalp_that_ships_with_them(real_scalp: Surface, electrodes: dict[str, np.ndarray]) -> None:
+def test_electrodes_lie_on_the_scalp_that_ships_with_them(
+    real_scalp: Surface, electrodes: dict[str, np.ndarray]
+) -> None:
     # trimesh measures a median of 2.2 mm and a largest distance of 6.8 mm (design notes, tried).
     points = np.array(list(electrodes.values()))
     distance = real_scalp.nearest(points).distance
@@ -100,7 +104,11 @@ def test_forty_targets_on_the_left_motor_strip(
     rows = [f"t{i:02d}\t{x!r}\t{y!r}\t{z!r}\tmidline_deg: 45" for i, (x, y, z) in enumerate(targets.tolist())]
     (study.folder / "targets.tsv").write_text("name\tx_mm\ty_mm\tz_mm\tdirection\n" + "\n".join(rows) + "\n")
     study.write(
-        {"head": {"scalp": "head.ply", "unit": "m", "origin": "surface"}, "targets": "targets.tsv", "pulses.per_pose": 1}
+        {
+            "head": {"scalp": "head.ply", "unit": "m", "origin": "surface"},
+            "targets": "targets.tsv",
+            "pulses.per_pose": 1,
+        }
     )
     assert cli("schedule", study.protocol, "-o", study.folder / "plan").code == 0
     assert cli("dry-run", study.folder / "plan").code == 0
@@ -123,7 +131,9 @@ def test_forty_targets_on_the_left_motor_strip(
     assert min(float(row["field_per_slope"]) for row in rows_by_name) > 0.3
 
 
-def test_scalp_to_cortex_under_the_motor_strip_is_what_is_published(real_scalp: Surface, left_pial: Surface, electrodes: dict[str, np.ndarray]) -> None:
+def test_scalp_to_cortex_under_the_motor_strip_is_what_is_published(
+    real_scalp: Surface, left_pial: Surface, electrodes: dict[str, np.ndarray]
+) -> None:
     # 12 to 20 mm (published range, as the design notes give it), about 16 mm under C3.
     at = real_scalp.nearest(electrodes["C3"][None]).points
     assert 12 <= left_pial.nearest(at).distance[0] <= 20

@@ -53,7 +53,9 @@ def coil(heat: dict[str, float] | None, *, generic: bool) -> Coil:
 
 # Gaps in us that stand at, just beside and far from every spacing the rules know.
 GAPS = st.one_of(
-    st.sampled_from([4_996_000, 4_995_000, 4_995_001, 5_000_000, 3_996_000, 3_995_999, 4_000_000, 2_997_000, 2_996_999]),
+    st.sampled_from(
+        [4_996_000, 4_995_000, 4_995_001, 5_000_000, 3_996_000, 3_995_999, 4_000_000, 2_997_000, 2_996_999]
+    ),
     st.sampled_from([2_002_001, 2_002_000, 2_500_000, 30_000_000, 600_000_000]),
     st.integers(2_002_001, 40_000_000),
 )
@@ -155,7 +157,13 @@ def both(
         {
             "threshold": [{"output_percent": THRESHOLD, "kind": k, "method": m} for k, m in kinds.items()],
             "pulses": {"output_percent": [50]}
-            | ({"pattern": pattern} if pattern else {"train": {"rate_hz": rate, "pulses": 2, "pause_s": 5}} if rate else {"interval_s": 5}),
+            | (
+                {"pattern": pattern}
+                if pattern
+                else {"train": {"rate_hz": rate, "pulses": 2, "pause_s": 5}}
+                if rate
+                else {"interval_s": 5}
+            ),
         },
     )
     schedule = Schedule(
@@ -169,13 +177,14 @@ def both(
         rate if not pattern else None,
     )
     entries = None if earlier is None else tuple(Entry(when, count, "session") for when, count in earlier)
-    case = Case(
-        schedule, model(Protocol, protocol), model(LabFile, lab), coil(heat, generic=generic), {}, NOW, entries
-    )
+    case = Case(schedule, model(Protocol, protocol), model(LabFile, lab), coil(heat, generic=generic), {}, NOW, entries)
     ours = {check.rule: check.verdict for check in rehearse(case).checks}
     parsed = lab | {"approvals": [a | {"until": dt.date.fromisoformat(a["until"])} for a in lab["approvals"]]}
     theirs = rechecker.recheck(
-        [rechecker.Pulse(int(t), "a", Fraction(o), sham, n or None) for t, (_, o, n) in zip(onset, pulses, strict=True)],
+        [
+            rechecker.Pulse(int(t), "a", Fraction(o), sham, n or None)
+            for t, (_, o, n) in zip(onset, pulses, strict=True)
+        ],
         thresholds={k: (Fraction(THRESHOLD), m) for k, m in kinds.items()},
         pattern=pattern,
         declared_rate_hz=None if rate is None or pattern else Fraction(rate),
@@ -208,7 +217,9 @@ cases = {
 }
 # Readings in which the rules are stricter on purpose, even on clean schedules.
 STRICTER = {"theta_burst", "day_pulses", "week_pulses"}
-FAST = settings(max_examples=400, deadline=None, suppress_health_check=[HealthCheck.too_slow, HealthCheck.filter_too_much])
+FAST = settings(
+    max_examples=400, deadline=None, suppress_health_check=[HealthCheck.too_slow, HealthCheck.filter_too_much]
+)
 
 
 @FAST
@@ -224,7 +235,9 @@ def test_clean_schedules_get_the_same_verdicts(pulses: list[tuple[int, int, int]
 
 @FAST
 @given(pulses=segments(clean=False), **cases)
-def test_no_schedule_gets_a_milder_verdict_than_from_the_rechecker(pulses: list[tuple[int, int, int]], **case: Any) -> None:
+def test_no_schedule_gets_a_milder_verdict_than_from_the_rechecker(
+    pulses: list[tuple[int, int, int]], **case: Any
+) -> None:
     ours, theirs = both(pulses, **case)
     if case["pattern"] == "intermittent_theta_burst":
         # A train of more than ten bursts is ordinary here and theta burst there: other rules then speak of it.

@@ -62,7 +62,8 @@ def test_dry_run_for_people_fits_80_columns_and_carries_the_cautions(study: Stud
 # From a protocol to an export, from another folder ------------------------------------------------------------------
 
 
-def test_the_whole_way(study: Study, cli: Cli, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+@pytest.mark.usefixtures("study")
+def test_the_whole_way(cli: Cli, tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     import pandas as pd
 
     elsewhere = tmp_path / "elsewhere"
@@ -73,15 +74,31 @@ def test_the_whole_way(study: Study, cli: Cli, tmp_path: Path, monkeypatch: pyte
     assert cli("dry-run", "plan").code == 0
     assert cli("export", "plan/poses.tsv", "--to", "tsv", "-o", "out/rig.tsv").code == 0
     assert cli("export", "plan/poses.tsv", "--to", "matrices", "-o", "out/rig.matrices").code == 0
-    columns = (
-        "pose target x_mm y_mm z_mm qw qx qy qz scalp_mm clearance_mm target_depth_mm projection_deg"
-        " direction_error_deg field_per_slope tilt_clear_deg reachable reason"
-    ).split()
+    columns = [
+        "pose",
+        "target",
+        "x_mm",
+        "y_mm",
+        "z_mm",
+        "qw",
+        "qx",
+        "qy",
+        "qz",
+        "scalp_mm",
+        "clearance_mm",
+        "target_depth_mm",
+        "projection_deg",
+        "direction_error_deg",
+        "field_per_slope",
+        "tilt_clear_deg",
+        "reachable",
+        "reason",
+    ]
     for table, expected in (
         ("poses/poses.tsv", columns),
         ("plan/poses.tsv", columns),
         ("out/rig.tsv", columns),
-        ("plan/schedule.tsv", "pulse onset_s pose output_percent threshold_percent kind train".split()),
+        ("plan/schedule.tsv", ["pulse", "onset_s", "pose", "output_percent", "threshold_percent", "kind", "train"]),
     ):
         frame = pd.read_csv(table, sep="\t", na_values=["n/a"])
         assert list(frame.columns) == expected
@@ -92,7 +109,9 @@ def test_the_whole_way(study: Study, cli: Cli, tmp_path: Path, monkeypatch: pyte
     assert np.array(matrices["head_from_coil"]["index"]).shape == (4, 4)
     receipt = json.loads(Path("out/rig.tsv.receipt.json").read_text())
     tip = np.array(matrices["head_from_coil"]["index"]) @ [50, 0, 0, 1]
-    np.testing.assert_allclose(receipt["worked_example"]["head_ras_mm"]["tip of +x (50 mm)"], tip[:3], rtol=0, atol=1e-9)
+    np.testing.assert_allclose(
+        receipt["worked_example"]["head_ras_mm"]["tip of +x (50 mm)"], tip[:3], rtol=0, atol=1e-9
+    )
     assert "the user's institution decides" in Path("out/rig.tsv.receipt.txt").read_text()
     # and back: what comes back is what went out
     assert cli("import", "out/rig.matrices", "--from", "matrices", "-o", "back.tsv").code == 0
@@ -117,7 +136,9 @@ def test_same_plan_same_bytes_and_a_changed_one_is_refused(study: Study, cli: Cl
     assert cli("schedule", study.protocol, "-o", plan, "--force").code == 0
 
 
-@pytest.mark.parametrize("name", ["schedule.tsv", "poses.tsv", "inputs/protocol.yaml", "inputs/scalp.ply", "inputs/lab.yaml"])
+@pytest.mark.parametrize(
+    "name", ["schedule.tsv", "poses.tsv", "inputs/protocol.yaml", "inputs/scalp.ply", "inputs/lab.yaml"]
+)
 def test_a_plan_changed_by_one_byte_is_refused(study: Study, cli: Cli, tmp_path: Path, name: str) -> None:
     plan = tmp_path / "plan"
     cli("schedule", study.protocol, "-o", plan)
@@ -186,20 +207,27 @@ def test_bad_input_is_one_line_each(study: Study, cli: Cli, tmp_path: Path) -> N
     assert placed(study, cli, {"targets": [TARGET | {"at_mm": [0, 0, 97]}]}, out)[0].startswith(
         "protocol.yaml:10:3: targets[0]: index: lies 7"
     )
-    assert "under the scalp, deeper than 60 mm" in placed(study, cli, {"targets": [TARGET | {"at_mm": [0, 0, 10]}]}, out)[0]
+    assert (
+        "under the scalp, deeper than 60 mm"
+        in placed(study, cli, {"targets": [TARGET | {"at_mm": [0, 0, 10]}]}, out)[0]
+    )
     assert placed(study, cli, {"targets": [TARGET, TARGET]}, out) == [
         "protocol.yaml:17:3: targets[1].name: 'index' is the name of two targets; rename one"
     ]
     assert placed(study, cli, {"targets": [TARGET | {"direction": {"vector": [0, 0, 0]}}]}, out) == [
         "protocol.yaml:15:3: targets[0].direction: a vector of zero length has no direction; give one with a length"
     ]
-    assert "degrees out of the plane that touches the scalp" in placed(
-        study, cli, {"targets": [TARGET | {"direction": {"vector": [-0.6, 0, 0.8]}}]}, out
-    )[0]
+    assert (
+        "degrees out of the plane that touches the scalp"
+        in placed(study, cli, {"targets": [TARGET | {"direction": {"vector": [-0.6, 0, 0.8]}}]}, out)[0]
+    )
     region = {"centre_mm": [0, 0, 300], "radius_mm": 20, "poses": 3, "seed": 1}
     assert "region: the region holds no scalp: the nearest is 210" in placed(study, cli, {"region": region}, out)[0]
     assert "neither a built-in coil" in placed(study, cli, {"coil": "figure9"}, out)[0]
-    assert "head.sphere: sphere" not in placed(study, cli, {"head.sphere": {"centre_mm": [0, 0, 0], "radius_mm": 300}}, out)[0]
+    assert (
+        "head.sphere: sphere"
+        not in placed(study, cli, {"head.sphere": {"centre_mm": [0, 0, 0], "radius_mm": 300}}, out)[0]
+    )
 
 
 def test_metres_declared_as_millimetres(study: Study, cli: Cli, tmp_path: Path) -> None:
@@ -209,8 +237,8 @@ def test_metres_declared_as_millimetres(study: Study, cli: Cli, tmp_path: Path) 
     )
     lines = placed(study, cli, {"head.scalp": "small.ply"}, tmp_path / "out")
     assert lines == [
-        "protocol.yaml:5:3: head.scalp: small.ply: in the declared unit (mm) its largest side is 0.18 mm; expected a head of"
-        " 100 to 450 mm; it would be a head in m: say `unit: m`"
+        "protocol.yaml:5:3: head.scalp: small.ply: in the declared unit (mm) its largest side is 0.18 mm; expected a"
+        " head of 100 to 450 mm; it would be a head in m: say `unit: m`"
     ]
     study.write({"head.scalp": "small.ply", "head.unit": "m"})
     assert cli("place", study.protocol, "-o", tmp_path / "out").code == 0
@@ -231,7 +259,13 @@ def test_every_trap_of_yaml_at_once(study: Study, cli: Cli) -> None:
     done = cli("dry-run", study.protocol)
     assert done.code == 2
     places = [line.removeprefix(f"{study.protocol}:").split(": ")[1] for line in done.errors]
-    assert places == ["title", "standoff_mm", "targets[0].direction.midline_deg", "threshold.output_percent", "order.seed"]
+    assert places == [
+        "title",
+        "standoff_mm",
+        "targets[0].direction.midline_deg",
+        "threshold.output_percent",
+        "order.seed",
+    ]
     study.protocol.write_text(study.protocol.read_text().replace("  seed", "\tseed"))
     assert "a tab where YAML wants spaces" in cli("dry-run", study.protocol).errors[0]
 
@@ -270,7 +304,9 @@ def test_not_a_plan(cli: Cli, tmp_path: Path) -> None:
 # Reach and the second phase ----------------------------------------------------------------------------------------
 
 
-def test_a_pose_that_cannot_be_reached_stays_in_the_table_and_nowhere_else(study: Study, cli: Cli, tmp_path: Path) -> None:
+def test_a_pose_that_cannot_be_reached_stays_in_the_table_and_nowhere_else(
+    study: Study, cli: Cli, tmp_path: Path
+) -> None:
     study.write({"reach": {"keep_out": [{"name": "left ear", "centre_mm": [-100, 50, 40], "radius_mm": 20}]}})
     assert cli("schedule", study.protocol, "-o", tmp_path / "plan").code == 0
     rows = [line.split("\t") for line in (tmp_path / "plan" / "poses.tsv").read_text().splitlines()]
@@ -280,7 +316,11 @@ def test_a_pose_that_cannot_be_reached_stays_in_the_table_and_nowhere_else(study
     done = cli("export", tmp_path / "plan" / "poses.tsv", "--to", "matrices", "-o", tmp_path / "rig.json")
     assert "1 poses written, 1 left out because they cannot be reached" in done.out
     assert "left ear entered by" in (tmp_path / "rig.json.receipt.txt").read_text()
-    check = next(c for c in json.loads(cli("dry-run", tmp_path / "plan", "--json").out)["checks"] if c["rule"] == "pose_reachable")
+    check = next(
+        c
+        for c in json.loads(cli("dry-run", tmp_path / "plan", "--json").out)["checks"]
+        if c["rule"] == "pose_reachable"
+    )
     assert (check["verdict"], check["note"][:25]) == ("caution", "left out: 1 of 2 poses (i")
 
 
@@ -305,8 +345,13 @@ def test_a_second_phase_coil_stands_turned_and_everything_says_so(study: Study, 
         np.testing.assert_allclose(b[:3, :2], -a[:3, :2], rtol=0, atol=1e-12)
     assert m[1]["half_turn_for_second_phase"] is True
     assert json.loads((tmp_path / "second" / "poses.json").read_text())["Coil"]["half_turn_for_second_phase"] is True
-    rows = [[dict(zip(t[0], r, strict=True)) for r in t[1:]] for t in (
-        [line.split("\t") for line in (tmp_path / d / "poses.tsv").read_text().splitlines()] for d in ("first", "second"))]
+    rows = [
+        [dict(zip(t[0], r, strict=True)) for r in t[1:]]
+        for t in (
+            [line.split("\t") for line in (tmp_path / d / "poses.tsv").read_text().splitlines()]
+            for d in ("first", "second")
+        )
+    ]
     # the wanted direction means the phase that stimulates: its field is the same for both
     for a, b in zip(*rows, strict=True):
         assert float(a["field_per_slope"]) > 0
@@ -390,7 +435,9 @@ def test_field_agrees_with_the_pose_table(study: Study, cli: Cli, tmp_path: Path
     cli("place", study.protocol, "-o", tmp_path / "a")
     points = tmp_path / "points.tsv"
     points.write_text("point\tx_mm\ty_mm\tz_mm\nhand\t-42\t0\t56\ntop\t0\t0\t60\n")
-    done = cli("field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "f.tsv")
+    done = cli(
+        "field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "f.tsv"
+    )
     assert done.code == 0
     rows = [line.split("\t") for line in (tmp_path / "f.tsv").read_text().splitlines()]
     assert rows[0] == ["pose", "point", "ex", "ey", "ez"]
@@ -400,7 +447,9 @@ def test_field_agrees_with_the_pose_table(study: Study, cli: Cli, tmp_path: Path
     # At the vertex the wanted direction is anterior, and the field agrees with it.
     assert e["vertex", "top"][1] == pytest.approx(float(table["vertex"]["field_per_slope"]), rel=1e-3)
     points.write_text("point\tx_mm\ty_mm\tz_mm\nout\t0\t0\t95\n")
-    done = cli("field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "g.tsv")
+    done = cli(
+        "field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "g.tsv"
+    )
     assert done.code == 2
     assert done.errors[0].startswith(f"{points}:2: out: lies outside the conducting sphere (95.0 mm")
     assert not (tmp_path / "g.tsv").exists()
@@ -442,5 +491,7 @@ def test_outputs_of_different_protocols_do_not_mix(study: Study, cli: Cli, tmp_p
     study.write({"coil": "coil.yaml"})
     points = tmp_path / "points.tsv"
     points.write_text("point\tx_mm\ty_mm\tz_mm\nhand\t-42\t0\t56\n")
-    done = cli("field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "f.tsv")
+    done = cli(
+        "field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "f.tsv"
+    )
     assert "made for the coil figure8-generic, the protocol names other" in done.err

@@ -106,7 +106,7 @@ def test_longest_single_train_at_below_and_above(hz: int, percent: int, seconds:
         assert check.from_memory
     assert table_cell("train_duration", "seconds", hz, percent * 1000) == seconds
     above = table_cell("train_duration", "seconds", hz, percent * 1000 + 1)
-    assert above == (None if percent == 130 else dict(((h, p), s) for h, p, s in CELLS)[hz, percent + 10])
+    assert above == (None if percent == 130 else {(h, p): s for h, p, s in CELLS}[hz, percent + 10])
 
 
 @pytest.mark.parametrize(("hz", "percent", "seconds", "count"), REPEATED_CELLS)
@@ -117,7 +117,7 @@ def test_longest_repeated_trains_at_below_and_above(hz: int, percent: int, secon
         checks = judge(two, percent / 2, train=np.repeat([1, 2], pulses))
         assert checks["train_pulses"].verdict == verdict
         # The smaller of sections 1 and 2 counts.
-        both = min(seconds, dict(((h, p), s) for h, p, s in CELLS)[hz, percent])
+        both = min(seconds, {(h, p): s for h, p, s in CELLS}[hz, percent])
         assert checks["train_duration"].limit == pytest.approx(both)
         assert checks["train_duration"].verdict == ("within" if pulses / hz <= both * (1 + 1e-9) else "exceeded")
         assert checks["train_intensity"].verdict == ("within" if percent <= 110 else "incomplete")
@@ -238,7 +238,12 @@ def test_theta_burst_as_described_is_within_and_leaves_the_train_tables(pattern:
     assert judge(onset, 40.001, train=train, protocol=changes)["theta_burst"].verdict == "exceeded"
     more = np.append(onset, onset[-1] + 6_000_000 + theta_burst_offsets("continuous_theta_burst")[0])
     numbers = np.append(train, np.full(600, train[-1] + 1))
-    again = judge(more, 40, train=numbers, protocol=changes | {"pulses": {"threshold_percent": [80], "pattern": "continuous_theta_burst"}})
+    again = judge(
+        more,
+        40,
+        train=numbers,
+        protocol=changes | {"pulses": {"threshold_percent": [80], "pattern": "continuous_theta_burst"}},
+    )
     if pattern == "continuous_theta_burst":
         assert again["theta_burst"].verdict == "exceeded"
         assert again["theta_burst"].unit == "pulses"
@@ -294,7 +299,15 @@ def test_the_labs_numbers_at_and_beyond_and_missing(rule: str, key: str, at: flo
 
 def test_without_a_lab_file_nothing_of_the_labs_is_within() -> None:
     checks = judge(SINGLES, lab={}, earlier=None)
-    mine = ("output", "interval", "session_pulses", "day_pulses", "week_pulses", "session_duration", "contact_temperature")
+    mine = (
+        "output",
+        "interval",
+        "session_pulses",
+        "day_pulses",
+        "week_pulses",
+        "session_duration",
+        "contact_temperature",
+    )
     assert {checks[rule].verdict for rule in mine} == {"incomplete"}
     assert judge(SINGLES, 101, lab={}, earlier=None)["output"].verdict == "exceeded"
 
@@ -364,7 +377,10 @@ def test_a_predicted_stop_is_refused_and_a_stop_above_41_needs_an_approval() -> 
     hot = {"contact_temperature_c": {"caution": 23, "stop": 24}}
     # 22 C at the start, towards skin at 33 C with a time constant of 900 s: 45 s warm the face by 0.55 C
     assert judge(SINGLES, lab=hot)["contact_temperature"].verdict == "caution"
-    assert judge(SINGLES, lab={"contact_temperature_c": {"caution": 22, "stop": 22.3}})["contact_temperature"].verdict == "exceeded"
+    assert (
+        judge(SINGLES, lab={"contact_temperature_c": {"caution": 22, "stop": 22.3}})["contact_temperature"].verdict
+        == "exceeded"
+    )
     loose = judge(SINGLES, lab={"contact_temperature_c": {"caution": 40, "stop": 44}})["contact_temperature"]
     assert loose.limit == 41
     allowed = {"contact_temperature_c": {"caution": 40, "stop": 44}} | approval(rule="contact_temperature", up_to=43)

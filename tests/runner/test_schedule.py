@@ -180,7 +180,13 @@ def test_trains_are_numbered_and_pause() -> None:
 
 @pytest.mark.parametrize(
     ("threshold", "percent", "step", "milli"),
-    [(46, 110, 1, 50_000), (46, 110, 0.5, 50_500), (46, 110, 0.1, 50_600), (50, 110, 1, 55_000), (33.3, 120, 1, 39_000)],
+    [
+        (46, 110, 1, 50_000),
+        (46, 110, 0.5, 50_500),
+        (46, 110, 0.1, 50_600),
+        (50, 110, 1, 55_000),
+        (33.3, 120, 1, 39_000),
+    ],
 )
 def test_outputs_are_rounded_down_in_decimal(threshold: float, percent: float, step: float, milli: int) -> None:
     assert rounded_down(Decimal(str(threshold)) * Decimal(str(percent)) / 100, Decimal(str(step))) == milli
@@ -201,7 +207,9 @@ SHA256 = "416c5e7cbf72c0a4e67d665aa514ba90074122a483620175d3e32431bb424667"
 def test_the_same_seed_gives_the_same_bytes_on_any_machine() -> None:
     s = build(9, order__sham_share=0.2, order__seed=11, pulses__threshold_percent=[100, 110, 120], pulses__per_pose=4)
     assert hashlib.sha256(write_schedule(s)).hexdigest() == SHA256
-    other = build(9, order__sham_share=0.2, order__seed=12, pulses__threshold_percent=[100, 110, 120], pulses__per_pose=4)
+    other = build(
+        9, order__sham_share=0.2, order__seed=12, pulses__threshold_percent=[100, 110, 120], pulses__per_pose=4
+    )
     assert write_schedule(other) != write_schedule(s)
 
 
@@ -262,7 +270,9 @@ def test_what_is_wrong_in_a_schedule_is_one_line(old: str, new: str, line: str) 
     assert list(refused.value.lines) == [f"s.tsv:{line}"]
 
 
-@pytest.mark.parametrize(("percent", "good"), [("108.745", True), ("108.746", False), ("108.646", True), ("108.645", False)])
+@pytest.mark.parametrize(
+    ("percent", "good"), [("108.745", True), ("108.746", False), ("108.646", True), ("108.645", False)]
+)
 def test_stated_percentages_agree_within_a_twentieth(percent: str, good: bool) -> None:
     text = HEADER + ROW_1.replace("108.696", percent)
     if good:
