@@ -8,11 +8,13 @@ others are split in four. Millimetres; triangles in the coil frame.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 from typing import Final
 
 import numpy as np
+from scipy.spatial import KDTree
 
-from .errors import InputError
+from .chunks import in_chunks
 from .frames import FloatArray, IntArray, invert_rigid, transform_points
 from .solids import Solid
 from .surface import Surface
@@ -22,8 +24,7 @@ from .triangles import dot
 DISTANCE_TOLERANCE_MM: Final = 1e-6
 _SQRT3: Final = 3**0.5
 _MOST_ROUNDS: Final = 60
-# Pose-vertex pairs at once.
-_PAIRS_AT_ONCE: Final = 2_000_000
+_TRIANGLES_AT_ONCE: Final = 400_000
 
 
 @dataclass(frozen=True)
@@ -46,6 +47,13 @@ class Obstacle:
     triangles: FloatArray
     radius_mm: float
     keep_mm: float
+
+    @cached_property
+    def tree(self) -> tuple[KDTree, float]:
+        """A tree of the triangles' middles, and how far a corner lies from its middle at most."""
+        middles = self.triangles.mean(axis=1)
+        spokes = self.triangles - middles[:, None]
+        return KDTree(middles), float(np.sqrt(dot(spokes, spokes).max()))
 
     @classmethod
     def ball(cls, name: str, centre_mm: FloatArray, radius_mm: float, keep_mm: float) -> Obstacle:
@@ -126,34 +134,49 @@ def clearances(
     above : float
         Distances above this come back as `inf`.
     """
-    result = np.empty(len(head_from_coil))
-    step = max(1, _PAIRS_AT_ONCE // max(1, len(obstacle.triangles) * 3))
-    for start in range(0, len(result), step):
-        poses = head_from_coil[start : start + step]
-        triangles, owner = _in_coil_frame(poses, solids, obstacle, above)
+
+    def work(part: slice) -> FloatArray:
+        poses = head_from_coil[part]
+        triangles, owner = near_triangles(poses, solids, obstacle, above)
         found = least_distance(solids, triangles, owner, len(poses), above=above + obstacle.radius_mm)
-        result[start : start + step] = found - obstacle.radius_mm
-    return result
+        return found - obstacle.radius_mm
+
+    parts = in_chunks(work, len(head_from_coil), poses_at_once(obstacle))
+    return np.concatenate(parts) if parts else np.empty(0)
 
 
-def _in_coil_frame(
-    poses: FloatArray, solids: tuple[Solid, ...], obstacle: Obstacle, above: float
+def poses_at_once(obstacle: Obstacle) -> int:
+    """How many poses are worked on together, so that memory stays bounded."""
+    return max(1, min(16, _TRIANGLES_AT_ONCE // max(1, len(obstacle.triangles))))
+
+
+def near_triangles(
+    poses: FloatArray, solids: tuple[Solid, ...], obstacle: Obstacle, within: float
 ) -> tuple[FloatArray, IntArray]:
-    """The obstacle's triangles in each pose's coil frame, those that a bounding ball rules out left out."""
-    coil_from_head = invert_rigid(poses)
-    local = transform_points(coil_from_head[:, None], obstacle.triangles.reshape(1, -1, 3))
-    local = local.reshape(len(poses), -1, 3, 3)
-    near = np.ones(local.shape[:2], dtype=bool)
-    if np.isfinite(above):
-        middle = local.mean(axis=2)
-        size = np.sqrt(((local - middle[:, :, None]) ** 2).sum(axis=3).max(axis=2))
-        near = np.zeros_like(near)
-        for solid in solids:
-            centre, radius = solid.bounds
-            gap = np.sqrt(((middle - centre) ** 2).sum(axis=2)) - size - radius
-            near |= gap < above + obstacle.radius_mm
-    owner = np.broadcast_to(np.arange(len(poses))[:, None], near.shape)[near]
-    return local[near], owner
+    """Return an obstacle's triangles (K, 3, 3) in each pose's coil frame, and whose they are (K,).
+
+    Triangles that the bounding balls of all solids keep farther away than `within` are left out.
+    """
+    if not np.isfinite(within):
+        local = _moved(poses, obstacle.triangles, np.repeat(np.arange(len(poses)), len(obstacle.triangles)), None)
+        return local, np.repeat(np.arange(len(poses)), len(obstacle.triangles))
+    bounds = [solid.bounds for solid in solids]
+    centres = transform_points(poses[:, None], np.array([centre for centre, _ in bounds])[None])
+    radii = np.array([radius for _, radius in bounds]) + within + obstacle.radius_mm
+    keys = []
+    tree, size = obstacle.tree
+    for s, radius in enumerate(radii):
+        lists = tree.query_ball_point(centres[:, s], radius + size, return_sorted=False)
+        keys += [np.asarray(part, dtype=np.int64) + k * len(obstacle.triangles) for k, part in enumerate(lists)]
+    owner, face = np.divmod(np.unique(np.concatenate(keys)), len(obstacle.triangles))
+    return _moved(poses, obstacle.triangles, owner, face), owner
+
+
+def _moved(poses: FloatArray, triangles: FloatArray, owner: IntArray, face: IntArray | None) -> FloatArray:
+    """Triangles of the head frame in the coil frames of their owners."""
+    chosen = np.tile(triangles, (len(poses), 1, 1)) if face is None else triangles[face]
+    inverse = invert_rigid(poses)[owner]
+    return np.asarray(np.einsum("kij,kcj->kci", inverse[:, :3, :3], chosen) + inverse[:, None, :3, 3])
 
 
 @dataclass(frozen=True)
@@ -190,24 +213,42 @@ def lift_clear(
         A pose that needs more than `lift_most_mm` is returned at that height, with a clearance below the standoff.
     """
     obstacle = Obstacle("scalp", scalp.triangles, 0.0, standoff_mm)
-    poses, lift = head_from_coil.copy(), np.zeros(len(head_from_coil))
-    clearance = np.full(len(poses), np.inf)
-    # Beyond the lowest standing pose nothing nearer than this can decide: the face's centre starts at the standoff.
-    above = standoff_mm + 2 * lift_most_mm + 10.0
-    pending = np.arange(len(poses))
-    while pending.size:
-        clearance[pending] = clearances(poses[pending], solids, obstacle, above=above)
-        missing = standoff_mm - clearance[pending]
-        go_on = (missing > DISTANCE_TOLERANCE_MM) & (lift[pending] < lift_most_mm)
-        step = np.minimum(missing[go_on], lift_most_mm - lift[pending[go_on]])
-        pending = pending[go_on]
-        # A step shorter than this cannot be told from rounding; it also bounds the number of rounds.
-        step = np.maximum(step, np.minimum(DISTANCE_TOLERANCE_MM, lift_most_mm - lift[pending]))
-        lift[pending] += step
-        poses[pending, :3, 3] = head_from_coil[pending, :3, 3] - lift[pending, None] * head_from_coil[pending, :3, 2]
+    _ = obstacle.tree  # made once, before threads ask for it
+    parts = in_chunks(
+        lambda part: _lift_chunk(head_from_coil[part], solids, obstacle, standoff_mm, lift_most_mm),
+        len(head_from_coil),
+        poses_at_once(obstacle),
+    )
+    lift = np.concatenate([part[0] for part in parts]) if parts else np.empty(0)
+    clearance = np.concatenate([part[1] for part in parts]) if parts else np.empty(0)
+    poses = head_from_coil.copy()
+    poses[:, :3, 3] -= lift[:, None] * head_from_coil[:, :3, 2]
     inside = _inside(poses, solids, scalp)
     clearance[inside] = np.minimum(clearance[inside], -scalp.nearest(poses[inside, :3, 3]).distance)
     return Lifted(poses, lift, clearance)
+
+
+def _lift_chunk(
+    poses: FloatArray, solids: tuple[Solid, ...], obstacle: Obstacle, standoff_mm: float, lift_most_mm: float
+) -> tuple[FloatArray, FloatArray]:
+    """Lift and clearance of some poses. In the coil frame, lifting the coil is shifting the head along +z."""
+    # The face's centre starts at the standoff over the scalp: nothing farther away than this can decide.
+    above = standoff_mm + 2 * lift_most_mm + 10.0
+    triangles, owner = near_triangles(poses, solids, obstacle, above)
+    lift, clearance = np.zeros(len(poses)), np.full(len(poses), np.inf)
+    pending = np.ones(len(poses), dtype=bool)
+    while pending.any():
+        mine = pending[owner]
+        shifted = triangles[mine]
+        shifted[:, :, 2] += lift[owner[mine], None]
+        found = least_distance(solids, shifted, owner[mine], len(poses), above=above)
+        clearance[pending] = found[pending]
+        missing = standoff_mm - clearance
+        pending &= (missing > DISTANCE_TOLERANCE_MM) & (lift < lift_most_mm)
+        # A step shorter than the tolerance cannot be told from rounding; it also bounds the number of rounds.
+        step = np.maximum(missing, DISTANCE_TOLERANCE_MM)
+        lift = np.where(pending, np.minimum(lift + step, lift_most_mm), lift)
+    return lift, clearance
 
 
 def _inside(poses: FloatArray, solids: tuple[Solid, ...], scalp: Surface) -> IntArray:
@@ -216,10 +257,3 @@ def _inside(poses: FloatArray, solids: tuple[Solid, ...], scalp: Surface) -> Int
     where = transform_points(poses[:, None], centres[None]).reshape(-1, 3)
     signed = scalp.signed_distance(where).reshape(len(poses), -1) if len(poses) else np.empty((0, 1))
     return np.flatnonzero((signed < 0).any(axis=1))
-
-
-def check_keep_outs(names: list[str]) -> None:
-    """Refuse keep-outs of one name: a reason must say which one it means."""
-    twice = sorted({name for name in names if names.count(name) > 1})
-    if twice:
-        raise InputError(*(f"keep-out {name!r} is there twice; give each its own name" for name in twice))
