@@ -44,7 +44,7 @@ def run_demo(folder: Path, template: Mapping[str, bytes], *, force: bool) -> Dem
     inputs = Inputs()
     source = read_source(folder / "protocol.yaml", inputs)
     planned = plan_poses(source, inputs)
-    paths += write_files(folder / "poses", pose_files(planned.poses), force=force)
+    paths += write_files(folder / "poses", pose_files(planned), force=force)
     plan = write_files(folder / "plan", plan_files(planned, plan_schedule(planned), inputs), force=force)
     paths += [path for path in plan if path.parent == folder / "plan"]
     for to_format, name in (("tsv", "poses.tsv"), ("matrices", "poses.json")):

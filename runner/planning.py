@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -20,6 +20,7 @@ from coilwright.geometry.phantom import phantom_cortex, phantom_scalp
 from coilwright.geometry.placement import Directions, Standing, check_targets, place, scalp_quality, stand
 from coilwright.geometry.pose_list import PoseList
 from coilwright.geometry.pose_sets import patch, random_scalp_points
+from coilwright.geometry.reach import LIMIT, Windows, tilt_windows
 from coilwright.geometry.sphere import FIT_RADIUS_MM, NARROW_FIT_RADIUS_MM, RESIDUAL_FINDING_MM, Spheres, fit_spheres
 from coilwright.geometry.surface import Surface, check_head_size, outward
 from coilwright.geometry.tables import MISSING, column_texts, floats, read_tsv
@@ -82,6 +83,8 @@ class Planned:
     poses : PoseList
         With every column of ``poses.tsv``.
     reachable : ndarray of bool, shape (N,)
+    windows : Windows
+        Tilt windows of the poses that can be reached, in their order.
     findings : tuple of Finding
     """
 
@@ -89,7 +92,15 @@ class Planned:
     head: Head
     poses: PoseList
     reachable: np.ndarray
+    windows: Windows
     findings: tuple[Finding, ...]
+
+    def blocker(self, index: int) -> str:
+        """Return the name of what blocks a tilt: ``scalp``, a keep-out's name, or ``limit``."""
+        if index == LIMIT:
+            return "limit"
+        names = ["scalp", *(keep_out.name for keep_out in self.source.protocol.reach.keep_out)]
+        return names[index]
 
 
 def read_source(path: Path, inputs: Inputs) -> Source:
@@ -222,7 +233,36 @@ def plan_poses(source: Source, inputs: Inputs) -> Planned:
         parts.append(part)
         findings += found
     poses = _joined(parts)
-    return Planned(source, head, poses, np.array(poses.reachable()), tuple(findings))
+    reachable = np.array(poses.reachable())
+    windows = _windows(source, head, poses.pose.matrix[reachable])
+    return Planned(source, head, _with_tilt(poses, reachable, windows), reachable, windows, tuple(findings))
+
+
+def _windows(source: Source, head: Head, head_from_coil: FloatArray) -> Windows:
+    """Tilt windows: by hand hair gives way, so the margin is kept from the scalp, not the standoff."""
+    reach = source.protocol.reach
+    scalp = Obstacle("scalp", head.scalp.triangles, 0.0, reach.margin_mm)
+    return tilt_windows(
+        head_from_coil,
+        source.coil.solids,
+        (scalp, *_keep_outs(source)),
+        limit_deg=reach.tilt_limit_deg,
+        azimuth_step_deg=reach.azimuth_step_deg,
+    )
+
+
+def _keep_outs(source: Source) -> tuple[Obstacle, ...]:
+    reach = source.protocol.reach
+    return tuple(
+        Obstacle.ball(item.name, np.array(item.centre_mm), item.radius_mm, reach.margin_mm) for item in reach.keep_out
+    )
+
+
+def _with_tilt(poses: PoseList, reachable: np.ndarray, windows: Windows) -> PoseList:
+    """The table with the smallest tilt of each pose that can be reached."""
+    smallest = np.full(len(poses.names), np.nan)
+    smallest[reachable] = windows.tilt_deg.min(axis=1)
+    return replace(poses, columns=dict(poses.columns) | {"tilt_clear_deg": column_texts(smallest)})
 
 
 def _joined(parts: Sequence[PoseList]) -> PoseList:
@@ -422,12 +462,11 @@ def _reach(source: Source, lifted: Lifted) -> tuple[FloatArray, list[str]]:
             f"scalp {_distance(clearance[i])} at the largest lift of {reach.lift_most_mm:g} mm,"
             f" {protocol.standoff_mm:g} mm wanted"
         )
-    for keep_out in reach.keep_out:
-        obstacle = Obstacle.ball(keep_out.name, np.array(keep_out.centre_mm), keep_out.radius_mm, reach.margin_mm)
+    for obstacle in _keep_outs(source):
         distance = clearances(lifted.head_from_coil, source.coil.solids, obstacle)
         clearance = np.minimum(clearance, distance)
         for i in np.flatnonzero(~(distance >= reach.margin_mm - DISTANCE_TOLERANCE_MM)):
-            reasons[i].append(f"{keep_out.name} {_distance(distance[i])}, {reach.margin_mm:g} mm wanted")
+            reasons[i].append(f"{obstacle.name} {_distance(distance[i])}, {reach.margin_mm:g} mm wanted")
     return clearance, ["; ".join(parts) for parts in reasons]
 
 

@@ -15,7 +15,7 @@ from coilwright.geometry.errors import InputError
 from coilwright.geometry.exchange import matrices, tsv
 from coilwright.geometry.files import Inputs, read_bytes, sha256
 from coilwright.geometry.pose_list import PoseList
-from coilwright.geometry.tables import json_bytes, sidecar_bytes
+from coilwright.geometry.tables import Column, column_texts, json_bytes, sidecar_bytes, to_tsv
 
 from .planning import Planned, Source, read_source
 from .schedule import COLUMNS, Schedule, build_schedule, output_levels, read_schedule, write_schedule
@@ -23,6 +23,15 @@ from .schedule import COLUMNS, Schedule, build_schedule, output_levels, read_sch
 PLAN_FILE: Final = "plan.json"
 SCHEMA: Final = 1
 POSES, SCHEDULE = "poses.tsv", "schedule.tsv"
+TILT_COLUMNS: Final = {
+    "pose": Column("Name of the pose in poses.tsv; poses that cannot be reached have no window"),
+    "azimuth_deg": Column(
+        "Axis of the tilt: cos(azimuth) x + sin(azimuth) y of the coil, through its origin", "degrees"
+    ),
+    "dips_towards_deg": Column("The side of the casing that dips towards the head: azimuth + 90", "degrees"),
+    "tilt_deg": Column("Largest right-handed tilt about that axis that keeps the margin", "degrees"),
+    "blocked_by": Column("What is met next: scalp, the name of a keep-out, or limit"),
+}
 
 
 @dataclass(frozen=True)
@@ -74,9 +83,24 @@ def plan_schedule(planned: Planned) -> Schedule:
     return build_schedule(source.protocol, names, planned.poses.pose.origin[rows], step_percent=step)
 
 
-def pose_files(poses: PoseList) -> dict[str, bytes]:
-    """Return ``poses.tsv`` with its sidecar and ``matrices.json``."""
-    return tsv.write(poses, POSES) | matrices.write(poses, "matrices.json")
+def pose_files(planned: Planned) -> dict[str, bytes]:
+    """Return ``poses.tsv``, ``tilt.tsv`` with their sidecars, and ``matrices.json``."""
+    return tsv.write(planned.poses, POSES) | matrices.write(planned.poses, "matrices.json") | _tilt_files(planned)
+
+
+def _tilt_files(planned: Planned) -> dict[str, bytes]:
+    windows, names = planned.windows, np.array(planned.poses.names)[planned.reachable]
+    count, steps = len(names), len(windows.azimuth_deg)
+    columns = {
+        "pose": np.repeat(names, steps).tolist(),
+        "azimuth_deg": column_texts(np.tile(windows.azimuth_deg, count)),
+        "dips_towards_deg": column_texts(np.tile((windows.azimuth_deg + 90.0) % 360.0, count)),
+        "tilt_deg": column_texts(windows.tilt_deg.ravel()),
+        "blocked_by": [planned.blocker(index) for index in windows.blocked_by.ravel().tolist()],
+    }
+    reach = planned.source.protocol.reach
+    extra = {"TiltLimitDeg": reach.tilt_limit_deg, "MarginMm": reach.margin_mm}
+    return {"tilt.tsv": to_tsv(columns), "tilt.json": sidecar_bytes(TILT_COLUMNS, extra)}
 
 
 def plan_files(planned: Planned, schedule: Schedule, inputs: Inputs) -> dict[str, bytes]:
@@ -92,7 +116,7 @@ def plan_files(planned: Planned, schedule: Schedule, inputs: Inputs) -> dict[str
             "no pose of this protocol can be reached; there is nothing to schedule (see `coilwright place`)"
         )
     source = planned.source
-    files = pose_files(planned.poses)
+    files = pose_files(planned)
     files[SCHEDULE] = write_schedule(schedule)
     files["schedule.json"] = sidecar_bytes(COLUMNS, {"Plan": PLAN_FILE})
     copies = _copy_names(inputs)

@@ -67,7 +67,7 @@ def _print_poses(summary: Mapping[str, Any]) -> None:
 
 @click.command("place")
 @click.argument("protocol", type=AnyPath)
-@click.option("-o", "--output", type=Folder, required=True, help="Folder for poses.tsv and matrices.json.")
+@click.option("-o", "--output", type=Folder, required=True, help="Folder for poses.tsv, matrices.json and tilt.tsv.")
 @click.option("--force", is_flag=True, help="Replace files that would change.")
 @click.option("--json", "json_", is_flag=True, help="Print the summary as JSON.")
 def place_command(protocol: Path, output: Path, *, force: bool, json_: bool) -> None:
@@ -78,7 +78,7 @@ def place_command(protocol: Path, output: Path, *, force: bool, json_: bool) -> 
     from coilwright.runner.plans import pose_files
 
     planned, _ = _planned(protocol)
-    paths = write_files(output, pose_files(planned.poses), force=force)
+    paths = write_files(output, pose_files(planned), force=force)
     summary = _pose_summary(planned)
     if json_:
         show.as_json(summary | {"files": [str(path) for path in paths]})
