@@ -98,12 +98,19 @@ def test_the_whole_way(cli: Cli, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
         ("poses/poses.tsv", columns),
         ("plan/poses.tsv", columns),
         ("out/rig.tsv", columns),
+        ("poses/tilt.tsv", ["pose", "azimuth_deg", "dips_towards_deg", "tilt_deg", "blocked_by"]),
         ("plan/schedule.tsv", ["pulse", "onset_s", "pose", "output_percent", "threshold_percent", "kind", "train"]),
     ):
         frame = pd.read_csv(table, sep="\t", na_values=["n/a"])
         assert list(frame.columns) == expected
         sidecar = json.loads(Path(table).with_suffix(".json").read_text())
         assert all(sidecar[column]["Description"] for column in expected)
+    tilt = pd.read_csv("plan/tilt.tsv", sep="\t")
+    poses = pd.read_csv("plan/poses.tsv", sep="\t", na_values=["n/a"])
+    assert len(tilt) == 2 * 24
+    assert (tilt["dips_towards_deg"] == (tilt["azimuth_deg"] + 90) % 360).all()
+    smallest = tilt.groupby("pose")["tilt_deg"].min()
+    assert poses.set_index("pose")["tilt_clear_deg"].to_dict() == smallest.to_dict()
     matrices = json.loads(Path("plan/matrices.json").read_text())
     assert (matrices["frame"], matrices["unit"]) == ("head", "mm")
     assert np.array(matrices["head_from_coil"]["index"]).shape == (4, 4)
