@@ -11,6 +11,7 @@ are split.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Final
 
@@ -58,6 +59,7 @@ def tilt_windows(
     *,
     limit_deg: float,
     azimuth_step_deg: float,
+    progress: Callable[[int], None] | None = None,
 ) -> Windows:
     """Return the tilt windows of many poses.
 
@@ -72,6 +74,8 @@ def tilt_windows(
         Tilts beyond it are not looked at; at most 90.
     azimuth_step_deg : float
         Between axes; both senses of each axis are covered, as azimuths go round.
+    progress : callable, optional
+        Told the number of poses that are done.
 
     Raises
     ------
@@ -102,6 +106,7 @@ def tilt_windows(
         lambda part: _one_pose(head_from_coil[part], solids, obstacles, np.radians(limit_deg), np.radians(azimuth)),
         len(head_from_coil),
         1,
+        progress,
     )
     shape = (len(head_from_coil), len(azimuth))
     tilt = np.degrees(np.array([part[0] for part in parts]).reshape(shape))

@@ -11,7 +11,7 @@ from coilwright.geometry.files import Inputs, write_files
 from .dry_run import dry_run, load_plan
 from .exporting import export_files
 from .planning import Planned, plan_poses, read_source
-from .plans import plan_files, plan_schedule, pose_files
+from .plans import POSE_FILES, plan_files, plan_schedule
 from .rehearsal import Rehearsal
 
 
@@ -44,11 +44,12 @@ def run_demo(folder: Path, template: Mapping[str, bytes], *, force: bool) -> Dem
     inputs = Inputs()
     source = read_source(folder / "protocol.yaml", inputs)
     planned = plan_poses(source, inputs)
-    paths += write_files(folder / "poses", pose_files(planned), force=force)
-    plan = write_files(folder / "plan", plan_files(planned, plan_schedule(planned), inputs), force=force)
+    files = plan_files(planned, plan_schedule(planned), inputs)
+    paths += write_files(folder / "poses", {name: files[name] for name in POSE_FILES}, force=force)
+    plan = write_files(folder / "plan", files, force=force)
     paths += [path for path in plan if path.parent == folder / "plan"]
     for to_format, name in (("tsv", "poses.tsv"), ("matrices", "poses.json")):
         target = folder / "export" / to_format / name
-        files = export_files(folder / "poses" / "poses.tsv", to_format, target.name)
-        paths += write_files(target.parent, files, force=force)
+        exported = export_files(folder / "poses" / "poses.tsv", to_format, target.name)
+        paths += write_files(target.parent, exported, force=force)
     return DemoResult(planned, dry_run(load_plan(folder / "plan")), tuple(paths))

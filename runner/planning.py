@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -83,8 +83,6 @@ class Planned:
     poses : PoseList
         With every column of ``poses.tsv``.
     reachable : ndarray of bool, shape (N,)
-    windows : Windows
-        Tilt windows of the poses that can be reached, in their order.
     findings : tuple of Finding
     """
 
@@ -92,8 +90,29 @@ class Planned:
     head: Head
     poses: PoseList
     reachable: np.ndarray
-    windows: Windows
     findings: tuple[Finding, ...]
+
+    def windows(self, progress: Callable[[int], None] | None = None) -> Windows:
+        """Find the tilt windows of the poses that can be reached, in their order; the longest part of placing.
+
+        By hand hair gives way, so the margin is kept from the scalp, not the standoff.
+        """
+        reach = self.source.protocol.reach
+        scalp = Obstacle("scalp", self.head.scalp.triangles, 0.0, reach.margin_mm)
+        return tilt_windows(
+            self.poses.pose.matrix[self.reachable],
+            self.source.coil.solids,
+            (scalp, *_keep_outs(self.source)),
+            limit_deg=reach.tilt_limit_deg,
+            azimuth_step_deg=reach.azimuth_step_deg,
+            progress=progress,
+        )
+
+    def table(self, windows: Windows) -> PoseList:
+        """Return the poses with the smallest tilt of each one that can be reached."""
+        smallest = np.full(len(self.poses.names), np.nan)
+        smallest[self.reachable] = windows.tilt_deg.min(axis=1)
+        return replace(self.poses, columns=dict(self.poses.columns) | {"tilt_clear_deg": column_texts(smallest)})
 
     def blocker(self, index: int) -> str:
         """Return the name of what blocks a tilt: ``scalp``, a keep-out's name, or ``limit``."""
@@ -233,22 +252,7 @@ def plan_poses(source: Source, inputs: Inputs) -> Planned:
         parts.append(part)
         findings += found
     poses = _joined(parts)
-    reachable = np.array(poses.reachable())
-    windows = _windows(source, head, poses.pose.matrix[reachable])
-    return Planned(source, head, _with_tilt(poses, reachable, windows), reachable, windows, tuple(findings))
-
-
-def _windows(source: Source, head: Head, head_from_coil: FloatArray) -> Windows:
-    """Tilt windows: by hand hair gives way, so the margin is kept from the scalp, not the standoff."""
-    reach = source.protocol.reach
-    scalp = Obstacle("scalp", head.scalp.triangles, 0.0, reach.margin_mm)
-    return tilt_windows(
-        head_from_coil,
-        source.coil.solids,
-        (scalp, *_keep_outs(source)),
-        limit_deg=reach.tilt_limit_deg,
-        azimuth_step_deg=reach.azimuth_step_deg,
-    )
+    return Planned(source, head, poses, np.array(poses.reachable()), tuple(findings))
 
 
 def _keep_outs(source: Source) -> tuple[Obstacle, ...]:
@@ -256,13 +260,6 @@ def _keep_outs(source: Source) -> tuple[Obstacle, ...]:
     return tuple(
         Obstacle.ball(item.name, np.array(item.centre_mm), item.radius_mm, reach.margin_mm) for item in reach.keep_out
     )
-
-
-def _with_tilt(poses: PoseList, reachable: np.ndarray, windows: Windows) -> PoseList:
-    """The table with the smallest tilt of each pose that can be reached."""
-    smallest = np.full(len(poses.names), np.nan)
-    smallest[reachable] = windows.tilt_deg.min(axis=1)
-    return replace(poses, columns=dict(poses.columns) | {"tilt_clear_deg": column_texts(smallest)})
 
 
 def _joined(parts: Sequence[PoseList]) -> PoseList:

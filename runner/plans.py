@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import platform
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
@@ -15,6 +15,7 @@ from coilwright.geometry.errors import InputError
 from coilwright.geometry.exchange import matrices, tsv
 from coilwright.geometry.files import Inputs, read_bytes, sha256
 from coilwright.geometry.pose_list import PoseList
+from coilwright.geometry.reach import Windows
 from coilwright.geometry.tables import Column, column_texts, json_bytes, sidecar_bytes, to_tsv
 
 from .planning import Planned, Source, read_source
@@ -23,6 +24,7 @@ from .schedule import COLUMNS, Schedule, build_schedule, output_levels, read_sch
 PLAN_FILE: Final = "plan.json"
 SCHEMA: Final = 1
 POSES, SCHEDULE = "poses.tsv", "schedule.tsv"
+POSE_FILES: Final = (POSES, "poses.json", "matrices.json", "tilt.tsv", "tilt.json")
 TILT_COLUMNS: Final = {
     "pose": Column("Name of the pose in poses.tsv; poses that cannot be reached have no window"),
     "azimuth_deg": Column(
@@ -83,13 +85,15 @@ def plan_schedule(planned: Planned) -> Schedule:
     return build_schedule(source.protocol, names, planned.poses.pose.origin[rows], step_percent=step)
 
 
-def pose_files(planned: Planned) -> dict[str, bytes]:
+def pose_files(planned: Planned, progress: Callable[[int], None] | None = None) -> dict[str, bytes]:
     """Return ``poses.tsv``, ``tilt.tsv`` with their sidecars, and ``matrices.json``."""
-    return tsv.write(planned.poses, POSES) | matrices.write(planned.poses, "matrices.json") | _tilt_files(planned)
+    windows = planned.windows(progress)
+    poses = planned.table(windows)
+    return tsv.write(poses, POSES) | matrices.write(poses, "matrices.json") | _tilt_files(planned, windows)
 
 
-def _tilt_files(planned: Planned) -> dict[str, bytes]:
-    windows, names = planned.windows, np.array(planned.poses.names)[planned.reachable]
+def _tilt_files(planned: Planned, windows: Windows) -> dict[str, bytes]:
+    names = np.array(planned.poses.names)[planned.reachable]
     count, steps = len(names), len(windows.azimuth_deg)
     columns = {
         "pose": np.repeat(names, steps).tolist(),
@@ -103,7 +107,9 @@ def _tilt_files(planned: Planned) -> dict[str, bytes]:
     return {"tilt.tsv": to_tsv(columns), "tilt.json": sidecar_bytes(TILT_COLUMNS, extra)}
 
 
-def plan_files(planned: Planned, schedule: Schedule, inputs: Inputs) -> dict[str, bytes]:
+def plan_files(
+    planned: Planned, schedule: Schedule, inputs: Inputs, progress: Callable[[int], None] | None = None
+) -> dict[str, bytes]:
     """Return every file of a frozen plan.
 
     Raises
@@ -116,7 +122,7 @@ def plan_files(planned: Planned, schedule: Schedule, inputs: Inputs) -> dict[str
             "no pose of this protocol can be reached; there is nothing to schedule (see `coilwright place`)"
         )
     source = planned.source
-    files = pose_files(planned)
+    files = pose_files(planned, progress)
     files[SCHEDULE] = write_schedule(schedule)
     files["schedule.json"] = sidecar_bytes(COLUMNS, {"Plan": PLAN_FILE})
     copies = _copy_names(inputs)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from importlib.resources import files
+from importlib import resources
 from pathlib import Path
 from typing import Any
 
@@ -19,7 +19,7 @@ AnyPath = click.Path(path_type=Path)
 
 def _template(folder: str) -> dict[str, bytes]:
     """The files of a folder of ``coilwright.protocols``."""
-    source = files("coilwright.protocols") / folder
+    source = resources.files("coilwright.protocols") / folder
     return {item.name: item.read_bytes() for item in sorted(source.iterdir(), key=lambda i: i.name) if item.is_file()}
 
 
@@ -78,7 +78,9 @@ def place_command(protocol: Path, output: Path, *, force: bool, json_: bool) -> 
     from coilwright.runner.plans import pose_files
 
     planned, _ = _planned(protocol)
-    paths = write_files(output, pose_files(planned), force=force)
+    with show.progress("tilt windows", int(planned.reachable.sum())) as tick:
+        files = pose_files(planned, tick)
+    paths = write_files(output, files, force=force)
     summary = _pose_summary(planned)
     if json_:
         show.as_json(summary | {"files": [str(path) for path in paths]})
@@ -101,7 +103,9 @@ def schedule_command(protocol: Path, output: Path, *, force: bool, json_: bool) 
 
     planned, inputs = _planned(protocol)
     schedule = plan_schedule(planned)
-    paths = write_files(output, plan_files(planned, schedule, inputs), force=force)
+    with show.progress("tilt windows", int(planned.reachable.sum())) as tick:
+        files = plan_files(planned, schedule, inputs, tick)
+    paths = write_files(output, files, force=force)
     summary = _pose_summary(planned) | {"pulses": len(schedule), "duration_s": schedule.duration_us / 1e6}
     if json_:
         show.as_json(summary | {"files": [str(path) for path in paths]})

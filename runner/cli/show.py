@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterable, Sequence
+import sys
+from collections.abc import Callable, Iterable, Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, Final
 
@@ -34,6 +36,20 @@ def written(paths: Iterable[Path]) -> None:
     """Print what was written."""
     for path in paths:
         click.echo(f"wrote {path}")
+
+
+@contextmanager
+def progress(what: str, total: int) -> Iterator[Callable[[int], None] | None]:
+    """Show how far long work has come, on a terminal only; yields what to call with each step, or None."""
+    if not sys.stderr.isatty():
+        yield None
+        return
+    from rich.console import Console
+    from rich.progress import Progress
+
+    with Progress(console=Console(stderr=True), transient=True) as bar:
+        task = bar.add_task(what, total=total)
+        yield lambda done: bar.update(task, advance=done)
 
 
 def number(value: float | None, digits: int = 3) -> str:
