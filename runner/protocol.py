@@ -139,6 +139,33 @@ class TrainSpec(Model):
     pause_s: Positive
 
 
+class ExponentialSpec(Model):
+    """Intervals of a floor plus an exponential wait.
+
+    Without `longest_s` the hazard beyond the floor is flat: having waited tells nothing about when the next pulse
+    comes. With it the distribution is cut off there, and the hazard rises towards the end.
+    """
+
+    floor_s: Annotated[float, Field(gt=0, le=2000)]
+    mean_s: Annotated[float, Field(gt=0, le=2000)]
+    longest_s: Annotated[float, Field(gt=0, le=2000)] | None = None
+
+    @model_validator(mode="after")
+    def _rising(self) -> ExponentialSpec:
+        if not self.mean_s > self.floor_s:
+            raise ValueError(f"mean_s {self.mean_s:g} must be above floor_s {self.floor_s:g}: it includes the floor")
+        if self.longest_s is not None and not self.longest_s > self.floor_s:
+            raise ValueError(f"longest_s {self.longest_s:g} must be above floor_s {self.floor_s:g}")
+        return self
+
+
+class RestSpec(Model):
+    """A pause after every so many pulses; a train or pattern is never broken."""
+
+    after_pulses: Count
+    minutes: Annotated[float, Field(gt=0, le=240)]
+
+
 class PulsesSpec(Model):
     """What is fired at each pose."""
 
@@ -147,8 +174,10 @@ class PulsesSpec(Model):
     percent_of: Literal["resting", "active"] | None = None
     per_pose: Count = 1
     interval_s: NumberOrPair | None = None
+    interval_exponential: ExponentialSpec | None = None
     train: TrainSpec | None = None
     pattern: Pattern | None = None
+    rest: RestSpec | None = None
 
     @field_validator("interval_s")
     @classmethod
@@ -173,8 +202,9 @@ class PulsesSpec(Model):
     def _one_of_each(self) -> PulsesSpec:
         if (self.threshold_percent is None) == (self.output_percent is None):
             raise ValueError("expected exactly one of threshold_percent, output_percent")
-        if sum(part is not None for part in (self.interval_s, self.train, self.pattern)) != 1:
-            raise ValueError("expected exactly one of interval_s, train, pattern")
+        timings = (self.interval_s, self.interval_exponential, self.train, self.pattern)
+        if sum(part is not None for part in timings) != 1:
+            raise ValueError("expected exactly one of interval_s, interval_exponential, train, pattern")
         return self
 
 

@@ -242,11 +242,32 @@ def theta_burst_offsets(pattern: str) -> tuple[IntArray, IntArray]:
 
 def _starts(protocol: Protocol, count: int, offsets: IntArray) -> IntArray:
     """Onset of each visit, us."""
-    pulses = protocol.pulses
+    gaps = _gaps(protocol, count - 1, offsets)
+    rest = protocol.pulses.rest
+    if rest:
+        done = (np.arange(count - 1) + 1) * len(offsets)
+        gaps = gaps + _rests(done, rest.after_pulses, len(offsets)) * _microseconds(
+            rest.minutes * 60, "pulses.rest.minutes"
+        )
+    return np.concatenate([np.zeros(1, dtype=np.int64), np.cumsum(gaps, dtype=np.int64)])
+
+
+def _rests(done: IntArray, after: int, per_visit: int) -> IntArray:
+    """Whether a rest follows each visit: where the count of pulses passes the next multiple of `after`."""
+    return np.asarray((done // after > (done - per_visit) // after).astype(np.int64))
+
+
+def _gaps(protocol: Protocol, count: int, offsets: IntArray) -> IntArray:
+    """From the start of each visit to the start of the next, us, without rests."""
+    pulses, draws = protocol.pulses, Draws(protocol.order.seed, "interval")
     if pulses.interval_s:
         low, high = (_microseconds(value, "pulses.interval_s") for value in pulses.interval_s)
-        gaps = low + Draws(protocol.order.seed, "interval").below(high - low + 1, count - 1)
-        return np.concatenate([np.zeros(1, dtype=np.int64), np.cumsum(gaps, dtype=np.int64)])
+        return low + draws.below(high - low + 1, count)
+    if pulses.interval_exponential:
+        wanted, name = pulses.interval_exponential, "pulses.interval_exponential"
+        floor, mean = _microseconds(wanted.floor_s, name), _microseconds(wanted.mean_s, name)
+        most = None if wanted.longest_s is None else _microseconds(wanted.longest_s, name) - floor
+        return floor + draws.exponential(mean - floor, count, most=most)
     if pulses.train:
         step = int(offsets[-1]) + _microseconds(pulses.train.pause_s, "pulses.train.pause_s")
     else:
@@ -254,7 +275,7 @@ def _starts(protocol: Protocol, count: int, offsets: IntArray) -> IntArray:
 
         every = int(published()["theta_burst"]["intermittent"]["every_s"]) * US
         step = (int(offsets[-1]) // every + 1) * every
-    return np.arange(count, dtype=np.int64) * step
+    return np.full(count, step, dtype=np.int64)
 
 
 def _microseconds(seconds: float, name: str) -> int:

@@ -155,6 +155,52 @@ def test_jitter_is_uniform_and_exact() -> None:
     assert np.diff(build(pulses__interval_s=5).onset_us).tolist() == [5_000_000] * 14
 
 
+def test_exponential_intervals_have_a_floor_and_a_flat_hazard() -> None:
+    flat = {"floor_s": 4, "mean_s": 6}
+    s = build(50, pulses__interval_s=None, pulses__interval_exponential=flat, pulses__per_pose=200)
+    waits = (np.diff(s.onset_us) - 4_000_000) / 2e6
+    assert waits.min() >= 0
+    assert kstest(waits, "expon").pvalue > 1e-3
+    cut = build(50, pulses__interval_s=None, pulses__interval_exponential=flat | {"longest_s": 9}, pulses__per_pose=200)
+    waits = (np.diff(cut.onset_us) - 4_000_000) / 2e6
+    assert waits.max() <= 2.5
+    assert kstest(waits, lambda x: -np.expm1(-x) / -np.expm1(-2.5)).pvalue > 1e-3
+
+
+def test_exponential_integers_do_not_hang_on_the_last_bit_of_a_logarithm() -> None:
+    from decimal import Decimal, localcontext
+
+    from coilwright.geometry.draws import Draws, _exact_exponential
+
+    words = Draws(5, "interval").words(300) >> np.uint64(11)
+    exact = [_exact_exponential(int(w), 2_000_000, None) for w in words]
+    assert Draws(5, "interval").exponential(2_000_000, 300).tolist() == exact
+    with localcontext() as context:
+        context.prec = 80
+        assert exact[0] == int(-2_000_000 * (1 - Decimal(int(words[0])) / 2**53).ln())
+
+
+@pytest.mark.parametrize(
+    ("wrong", "message"),
+    [
+        ({"floor_s": 4, "mean_s": 4}, "mean_s 4 must be above floor_s 4"),
+        ({"floor_s": 4, "mean_s": 6, "longest_s": 3}, "longest_s 3 must be above floor_s 4"),
+    ],
+)
+def test_exponential_intervals_that_make_no_sense(wrong: dict[str, float], message: str) -> None:
+    with pytest.raises(InputError, match=message):
+        protocol(pulses__interval_s=None, pulses__interval_exponential=wrong)
+
+
+def test_rests_follow_every_so_many_pulses_and_break_no_train() -> None:
+    rest = {"after_pulses": 4, "minutes": 2}
+    s = build(5, pulses__interval_s=5, pulses__rest=rest, pulses__per_pose=2)
+    assert np.diff(s.onset_us).tolist() == [5_000_000] * 3 + [125_000_000] + [5_000_000] * 3 + [125_000_000, 5_000_000]
+    train = {"rate_hz": 10, "pulses": 3, "pause_s": 10}
+    s = build(3, pulses__interval_s=None, pulses__train=train, pulses__rest=rest, pulses__per_pose=1)
+    assert np.diff(s.onset_us[::3]).tolist() == [10_200_000, 130_200_000]
+
+
 def test_a_million_onsets_do_not_drift() -> None:
     offsets = train_offsets(3.0, 1_000_001)
     assert offsets[-1] == 333_333_333_333  # a third of a microsecond short, not a third of a second
