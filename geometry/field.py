@@ -16,6 +16,7 @@ from typing import Final
 
 import numpy as np
 
+from .chunks import in_chunks
 from .errors import InputError, ItemError
 from .frames import FloatArray, transform_points
 from .sphere import Spheres
@@ -25,7 +26,9 @@ from .windings import Elements
 _MU0_OVER_4PI: Final = 1e-7
 _M_PER_MM: Final = 1e-3
 # Element-point pairs at once: the working arrays of this many doubles stay in the processor's cache.
-PAIRS_AT_ONCE: Final = 30_000
+PAIRS_AT_ONCE: Final = 20_000
+# Chunks that one thread works through in the same arrays.
+CHUNKS_A_THREAD: Final = 40
 
 
 def check_inside(spheres: Spheres, points: FloatArray) -> None:
@@ -135,15 +138,21 @@ def field_at_points(
             f"a point lies {farthest / _M_PER_MM:.1f} mm from the sphere's centre, no nearer than the coil's nearest"
             f" element ({np.sqrt(big_squared.min()) / _M_PER_MM:.1f} mm); points must lie inside the head"
         )
-    out = np.empty_like(r)
     step = max(1, PAIRS_AT_ONCE // len(big_r))
-    work = np.empty((7, len(big_r), step))
     big_length, big_m = np.sqrt(big_squared), dot(big_r, m)[:, None]
-    for start in range(0, len(r), step):
-        part = r[start : start + step]
-        v = _sum_elements(big_r, m, part, big_squared, big_length, big_m, work[:, :, : len(part)])
-        out[start : start + step] = cross(part, v)
-    return np.asarray(out * _MU0_OVER_4PI)
+
+    def some(part: slice) -> FloatArray:
+        """The field at a stretch of points, chunk by chunk in the same working arrays."""
+        mine = r[part]
+        work, out = np.empty((7, len(big_r), step)), np.empty_like(mine)
+        for start in range(0, len(mine), step):
+            few = mine[start : start + step]
+            v = _sum_elements(big_r, m, few, big_squared, big_length, big_m, work[:, :, : len(few)])
+            out[start : start + step] = cross(few, v)
+        return out
+
+    parts = in_chunks(some, len(r), max(step * CHUNKS_A_THREAD, 1))
+    return np.concatenate(parts) * _MU0_OVER_4PI if parts else np.empty((0, 3))
 
 
 def _sum_elements(
