@@ -148,6 +148,11 @@ class Surface:
         return KDTree(self.triangles.mean(axis=1))
 
     @cached_property
+    def _vertex_tree(self) -> KDTree:
+        """Of the vertices that belong to a face."""
+        return KDTree(self.vertices[np.unique(self.faces)])
+
+    @cached_property
     def _reach(self) -> FloatArray:
         """How far each triangle's corners lie from its centroid, shape (F,), mm."""
         spokes = self.triangles - self.triangles.mean(axis=1, keepdims=True)
@@ -161,9 +166,7 @@ class Surface:
         points : ndarray, shape (N, 3)
         radius : ndarray, shape (N,)
         """
-        lists = self._centroid_tree.query_ball_point(
-            points, radius + self._reach.max(), return_sorted=False, workers=-1
-        )
+        lists = self._centroid_tree.query_ball_point(points, radius + self._reach.max(), return_sorted=False)
         counts = np.fromiter(map(len, lists), dtype=np.int64, count=len(lists))
         owner = np.repeat(np.arange(len(points)), counts)
         face = np.concatenate([np.asarray(part, dtype=np.int64) for part in lists]) if len(lists) else owner
@@ -188,7 +191,7 @@ class Surface:
         True
         """
         query = np.atleast_2d(check_points(points))
-        _ = self._centroid_tree, self._reach, self.face_normals  # made once, before threads ask for them
+        _ = self._centroid_tree, self._vertex_tree, self._reach, self.face_normals  # made once, before threads ask
         parts = in_chunks(lambda part: self._nearest_chunk(query[part]), len(query), chunk)
         if not parts:
             return Nearest(np.empty((0, 3)), np.empty(0), np.empty(0, dtype=np.int64), np.empty((0, 3)))
@@ -200,12 +203,8 @@ class Surface:
         )
 
     def _nearest_chunk(self, points: FloatArray) -> Nearest:
-        """An upper bound from the faces with the nearest centroids, then every face that could be nearer."""
-        k = min(4, len(self.faces))
-        first = np.asarray(self._centroid_tree.query(points, k=k, workers=-1)[1]).reshape(len(points), k)
-        owner = np.repeat(np.arange(len(points)), k)
-        bound = np.sqrt(self._squared(points[owner], first.ravel())[0].reshape(-1, k).min(axis=1))
-        bound = bound * (1 + 1e-9) + 1e-9
+        """An upper bound from the nearest vertex, then every face that could be nearer."""
+        bound = np.asarray(self._vertex_tree.query(points)[0]) * (1 + 1e-9) + 1e-9
         owner, face = self.candidate_pairs(points, bound)
         plane = tri.dot(points[owner] - self.triangles[face, 0], self.face_normals[face])
         owner, face = (part[np.abs(plane) <= bound[owner]] for part in (owner, face))
