@@ -15,11 +15,12 @@ from typing import Annotated, Any, Final, Literal
 import numpy as np
 from pydantic import Field, field_validator, model_validator
 
-from .documents import Document, Model, Vector3, read_yaml, validate
+from .documents import Document, Model, Vector3, Version, read_yaml, validate
 from .errors import Finding, InputError, did_you_mean
 from .files import Inputs
 from .frames import FloatArray, read_only
 from .mesh_files import parse_surface
+from .names import Name
 from .solids import Box, Capsule, Cylinder, Hull, Solid
 from .tables import floats, read_tsv
 
@@ -29,7 +30,8 @@ FACE_TOLERANCE_MM: Final = 1e-6
 # A hull that holds this much more than the mesh it wraps is worth a look.
 HULL_EXCESS: Final = 0.05
 
-Positive = Annotated[float, Field(gt=0)]
+# No coil has a side, a radius, turns or a slope beyond this.
+Positive = Annotated[float, Field(gt=0, le=10_000)]
 Sense = Literal[-1, 1]
 
 
@@ -142,8 +144,8 @@ class Heat(Model):
 class CoilFile(Model):
     """A coil file."""
 
-    coilwright_coil: Literal[1]
-    name: Annotated[str, Field(min_length=1, max_length=64)]
+    coilwright_coil: Version
+    name: Name
     casing: Annotated[tuple[CasingPart, ...], Field(min_length=1)]
     handle: Handle | None = None
     windings: tuple[WindingPart, ...] = ()

@@ -11,7 +11,7 @@ import math
 import re
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
-from typing import Annotated, Any, Final, TypeAlias, TypeVar
+from typing import Annotated, Any, Final, Literal, TypeAlias, TypeVar
 
 import yaml
 from pydantic import BaseModel, BeforeValidator, ConfigDict, ValidationError, WithJsonSchema
@@ -23,7 +23,11 @@ Path: TypeAlias = "tuple[Key, ...]"
 Place: TypeAlias = "tuple[int, int]"
 
 DEEPEST_NESTING: Final = 40
+# Tags of unions in models: pydantic puts them into paths, no message shows them.
+UNION_TAGS: Final = ("<file>", "<list>")
 LARGEST_NUMBER: Final = 1e300
+# No head, coil or room is larger.
+FARTHEST_MM: Final = 1e5
 _SEXAGESIMAL: Final = re.compile(r"[-+]?[0-9][0-9_]*(:[0-5]?[0-9])+(\.[0-9_]*)?")
 _OCTAL: Final = re.compile(r"[-+]?0[0-7_]+")
 _ALMOST_NUMBER: Final = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)[eE][-+]?\d+")
@@ -67,6 +71,12 @@ class Document:
         while path and path not in self.places:
             path = path[:-1]
         return self.places.get(path, (1, 1))
+
+    def located(self, line: str) -> str:
+        """Put the place before a line that begins with a key of this file (``order.kind: ...``)."""
+        key, separator, rest = line.partition(": ")
+        path: Path = tuple(key.split("."))
+        return f"{self.at(path)}{separator}{rest}" if path in self.places else f"{self.name}:1:1: {line}"
 
     def at(self, path: Path) -> str:
         """Return ``name:line:column: dotted.path`` of a value, or of the nearest thing around it that exists."""
@@ -217,13 +227,18 @@ class _Builder:
             problem = f"{text} is a base-60 number to YAML; write plain seconds, or quote text"
         elif _OCTAL.fullmatch(text):
             problem = f"{text} is an octal number to YAML; take out the leading zero, or quote text"
+        elif "_" in text:
+            problem = f"{text} is a number to YAML; take out the underscore, or quote text"
         else:
             try:
                 value = yaml.safe_load(text)
             except ValueError:
                 value = math.inf
-            if not abs(value) <= LARGEST_NUMBER:
-                problem = f"expected a finite number, got {text[:40]}"
+            if isinstance(value, str) or not abs(value) <= LARGEST_NUMBER:
+                wanted = (
+                    "a finite number" if text.lstrip("+-").startswith(".") else f"a number below {LARGEST_NUMBER:g}"
+                )
+                problem = f"expected {wanted}, got {text[:40]}"
         if problem:
             self.problems[path] = f"{where}: {problem}"
             return None
@@ -268,7 +283,7 @@ def _as_written(document: Document, start: Path, keys: Path) -> Path:
 
 def _innermost(details: list[Any]) -> list[Any]:
     """Leave out what is said of a whole because a part of it is wrong."""
-    details = [detail | {"loc": tuple(k for k in detail["loc"] if not str(k).startswith("<"))} for detail in details]
+    details = [detail | {"loc": tuple(k for k in detail["loc"] if k not in UNION_TAGS)} for detail in details]
     paths = [detail["loc"] for detail in details]
     return [d for d in details if not any(p != d["loc"] and p[: len(d["loc"])] == d["loc"] for p in paths)]
 
@@ -362,11 +377,22 @@ class AlsoAccepts:
         return 0  # a schema is no key; annotations of one type may share a bucket
 
 
+def _whole_one(value: Any) -> Any:
+    if type(value) is not int or value != 1:
+        raise ValueError(f"expected 1, the version that this program reads, got {value!r}")
+    return value
+
+
+Version: TypeAlias = Annotated[Literal[1], BeforeValidator(_whole_one)]
+
+
 def _from_list(value: Any) -> Any:
     if isinstance(value, list) and (
         len(value) != 3 or any(isinstance(v, bool) or not isinstance(v, int | float) for v in value)
     ):
         raise ValueError(f"expected three numbers [x, y, z], got {value}")
+    if isinstance(value, list) and not all(abs(v) <= FARTHEST_MM for v in value):
+        raise ValueError(f"expected coordinates within {FARTHEST_MM:g} mm, got {value}")
     return tuple(value) if isinstance(value, list) else value
 
 

@@ -35,6 +35,8 @@ def read_bytes(path: Path, where: str | None = None) -> bytes:
     """
     lead = f"{where}: " if where else ""
     try:
+        if path.exists() and not path.is_file():
+            raise InputError(f"{lead}{path}: expected a file, got a folder or a device")
         return path.read_bytes()
     except FileNotFoundError:
         raise InputError(f"{lead}{path}: no such file; paths are relative to the file that names them") from None
@@ -121,6 +123,8 @@ def write_files(folder: Path, files: Mapping[str, bytes], *, force: bool = False
 
 
 def _would_change(path: Path, data: bytes) -> bool:
+    if path.is_symlink() and not path.exists():
+        return True  # a link to somewhere: never replaced without a word
     try:
         return path.read_bytes() != data
     except (FileNotFoundError, NotADirectoryError):

@@ -49,6 +49,8 @@ def parse_surface(data: bytes, name: str, *, axes: str = "RAS", unit: str = "mm"
     except InputError:
         raise
     except Exception as error:  # noqa: BLE001 - a damaged file makes third-party readers raise almost anything
+        if isinstance(error, ImportError):  # trimesh looks for helpers when it cannot make sense of the bytes
+            error = ValueError("damaged, or of another kind")
         what = str(error).split("\n")[0][:120] or type(error).__name__
         raise InputError(f"{name}: cannot be read as {suffix[1:].upper()} ({what})") from None
     if not len(vertices) or faces.ndim != 2 or faces.shape[1:] != (3,) or not len(faces):

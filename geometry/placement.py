@@ -147,10 +147,14 @@ def place(
     if spheres is None:
         raise ItemError([(0, "aim over_target needs the sphere whose centre the ray leaves")])
     outwards = unit_vectors(targets - spheres.centres, "target minus the sphere's centre")
-    points = targets + scalp.ray_exit(targets, outwards)[:, None] * outwards
-    lost = np.flatnonzero(~np.isfinite(points).all(axis=1))
+    along_ray = scalp.ray_exit(targets, outwards)
+    points = targets + along_ray[:, None] * outwards
+    lost = np.flatnonzero(~(along_ray <= DEEPEST_TARGET_MM))
     if lost.size:
-        raise ItemError((int(i), "the ray from the sphere's centre through it meets no scalp") for i in lost)
+        raise ItemError(
+            (int(i), f"the ray from the sphere's centre through it meets no scalp within {DEEPEST_TARGET_MM:g} mm")
+            for i in lost
+        )
     return stand(
         scalp,
         points,

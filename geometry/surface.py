@@ -350,6 +350,23 @@ class Surface:
         return (Finding(self.name, message),)
 
 
+def check_winding(surface: Surface) -> None:
+    """Refuse a mesh whose faces wind against each other: neither its inside nor its normals mean anything.
+
+    Raises
+    ------
+    InputError
+    """
+    edges = surface._directed_edges  # noqa: SLF001 - a function of this module
+    keys = edges[:, 0] * len(surface.vertices) + edges[:, 1]
+    against = len(keys) - len(np.unique(keys))
+    if against:
+        raise InputError(
+            f"{surface.name}: {against} edges join faces that wind against each other; make the winding consistent,"
+            " normals outwards, in a mesh editor"
+        )
+
+
 def check_head_size(surface: Surface, unit: str) -> None:
     """Refuse a mesh that is no head in the declared unit: the usual mistake is metres read as millimetres.
 

@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 import math
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Final
@@ -17,6 +18,9 @@ from .errors import InputError, did_you_mean
 from .frames import FloatArray
 
 MISSING: Final = "n/a"
+# A number as tables hold it: ASCII digits, no spaces, no underscores.
+NOT_FINITE: Final = ("nan", "inf", "infinity")
+PLAIN: Final = re.compile(r"[+-]?([0-9]+\.?[0-9]*|\.[0-9]+)([eE][+-]?[0-9]+)?")
 
 
 @dataclass(frozen=True)
@@ -141,23 +145,16 @@ def _check_header(header: list[str], name: str, required: Sequence[str], *, exac
 
 def floats(cells: Sequence[str], name: str, column: str, *, missing: bool = False) -> FloatArray:
     """Read a column of finite numbers; ``n/a`` becomes NaN where `missing` is allowed, everything else is refused."""
-    try:
-        array = np.array(cells, dtype=np.float64)
-        if np.isfinite(array).all():
-            return array
-    except ValueError:
-        pass
     values, problems = np.full(len(cells), np.nan), []
     for i, cell in enumerate(cells):
         if cell == MISSING and missing:
             continue
-        try:
+        if PLAIN.fullmatch(cell):
             values[i] = float(cell)
-        except ValueError:
-            problems.append(f"{name}:{i + 2}: {column}: expected a number, got {cell!r}")
-            continue
-        if not math.isfinite(values[i]):
-            problems.append(f"{name}:{i + 2}: {column}: expected a finite number, got {cell!r}")
+            if math.isfinite(values[i]):
+                continue
+        wanted = "a finite number" if cell.lower().lstrip("+-") in NOT_FINITE or PLAIN.fullmatch(cell) else "a number"
+        problems.append(f"{name}:{i + 2}: {column}: expected {wanted}, got {cell!r}")
     if problems:
         raise InputError(*problems[:20])
     return values

@@ -2,18 +2,16 @@
 
 from __future__ import annotations
 
+import re
 from typing import Annotated, Final
 
-import yaml
 from pydantic import Field, model_validator
 
-from .documents import Document, Model, Vector3, validate
+from .documents import Document, Model, Vector3, read_yaml, validate
 from .errors import InputError
+from .names import Name
 from .tables import floats, read_tsv
 
-# Names go into tables, file names and other systems: letters, digits and a few signs, at most 64.
-NAME_PATTERN: Final = r"^[A-Za-z0-9][A-Za-z0-9 _.+-]{0,63}$"
-Name = Annotated[str, Field(pattern=NAME_PATTERN)]
 TABLE_COLUMNS: Final = ("name", "x_mm", "y_mm", "z_mm", "direction")
 
 
@@ -55,13 +53,15 @@ def read_target_table(data: bytes, name: str) -> tuple[list[TargetSpec], list[st
     points = [floats(table[c], name, c) for c in TABLE_COLUMNS[1:4]]
     targets, problems = [], []
     wheres = [f"{name}:{i + 2}:1" for i in range(len(table["name"]))]
+    if not wheres:
+        raise InputError(f"{name}:2:1: holds no target")
     for i, where in enumerate(wheres):
-        value = {
-            "name": table["name"][i],
-            "at_mm": [float(axis[i]) for axis in points],
-            "direction": _direction_cell(table["direction"][i]),
-        }
         try:
+            value = {
+                "name": table["name"][i],
+                "at_mm": [float(axis[i]) for axis in points],
+                "direction": _direction_cell(table["direction"][i], where),
+            }
             targets.append(validate(Document(where, value, {(): (1, 1)}), TargetSpec))
         except InputError as error:
             problems += [line.replace(f"{where}:1:1:", f"{where}:", 1) for line in error.lines]
@@ -70,10 +70,12 @@ def read_target_table(data: bytes, name: str) -> tuple[list[TargetSpec], list[st
     return targets, wheres
 
 
-def _direction_cell(text: str) -> object:
+def _direction_cell(text: str, where: str) -> object:
+    """A cell as the protocol's own YAML reads it, with all its refusals; a number alone is a midline angle."""
     inner = text.strip().removeprefix("{").removesuffix("}")
-    try:
-        value = yaml.safe_load("{" + inner + "}") if ":" in inner else yaml.safe_load(inner)
-    except yaml.YAMLError:
-        return text
+    written = f"{{{inner}}}" if ":" in inner else inner
+    document = read_yaml(f"direction: {written}".encode(), where)
+    if document.problems:
+        raise InputError(*(re.sub(r":1:\d+:", ":", line, count=1) for line in document.problems.values()))
+    value = document.value["direction"]
     return {"midline_deg": value} if isinstance(value, int | float) and not isinstance(value, bool) else value

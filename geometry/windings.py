@@ -13,7 +13,7 @@ import numpy as np
 
 from .coil import Coil, Loop, Spiral
 from .errors import InputError
-from .frames import FloatArray, read_only
+from .frames import FloatArray, angle_between_deg, read_only
 from .triangles import cross
 
 # Radial nodes for each smooth piece, and nodes around: chosen so that the field 15 mm below the scalp is within 0.1 %
@@ -95,6 +95,39 @@ def quadrature_error(coil: Coil, points_mm: FloatArray, *, radial: int = RADIAL,
     fields = [_free_space_field(coil_elements(coil, radial=radial * k, around=around * k), points_mm) for k in (1, 3)]
     scale = np.linalg.norm(fields[1], axis=1).max()
     return float(np.linalg.norm(fields[0] - fields[1], axis=1).max() / scale)
+
+
+# How far the field below the origin may stand off +x: a real coil's lead adds a few degrees.
+X_AXIS_LIMIT_DEG: Final = 30.0
+_BELOW_MM: Final = 20.0
+
+
+def check_x_axis(coil: Coil) -> None:
+    """Refuse windings whose field below the origin is not along +x: every pose would be turned by the difference.
+
+    In free space, 20 mm below the origin; a coil with no field there (a round coil about its own centre) is refused as
+    well, because its +x would mean nothing.
+
+    Raises
+    ------
+    InputError
+        With the angle, and the usual reason.
+    """
+    elements = coil_elements(coil)
+    grid = np.array([[x, y, _BELOW_MM] for x in range(-60, 61, 20) for y in range(-60, 61, 20)], dtype=np.float64)
+    below = _free_space_field(elements, np.array([[0.0, 0.0, _BELOW_MM]]))[0]
+    largest = float(np.linalg.norm(_free_space_field(elements, grid), axis=1).max())
+    if not np.linalg.norm(below) > 0.1 * largest:
+        raise InputError(
+            f"{coil.name}: windings: there is hardly a field below the origin, so +x means nothing; put the origin"
+            " where the field is (over the windings of a round coil)"
+        )
+    off = float(angle_between_deg(below, [1.0, 0.0, 0.0]))
+    if not off <= X_AXIS_LIMIT_DEG:
+        raise InputError(
+            f"{coil.name}: windings: while the current rises the field below the origin stands {off:.0f} degrees off"
+            " +x; exchange the senses, or turn the coil's axes"
+        )
 
 
 def _free_space_field(elements: Elements, points_mm: FloatArray) -> FloatArray:

@@ -35,6 +35,8 @@ class Case:
         The person's ledger; None where the lab names none.
     start_c : float, optional
         Temperature of the contact face at the first pulse; the coil file's if left out.
+    ledger_note : str, optional
+        Why the ledger is empty, where it is.
     """
 
     schedule: Schedule
@@ -45,6 +47,7 @@ class Case:
     now: dt.datetime
     earlier: tuple[Entry, ...] | None
     start_c: float | None = None
+    ledger_note: str | None = None
 
     @cached_property
     def trains(self) -> Trains:

@@ -8,9 +8,9 @@ from pathlib import Path
 from coilwright.geometry.files import Inputs
 
 from .case import Case
-from .ledger import read_ledger
+from .ledger import ledger_path, read_ledger
 from .planning import plan_poses, read_source
-from .plans import Plan, is_plan, ledger_folder, plan_schedule, read_plan, schedule_for
+from .plans import PLAN_FILE, Plan, is_plan, ledger_folder, plan_schedule, read_plan, schedule_for
 from .rehearsal import Rehearsal, rehearse
 
 
@@ -24,6 +24,7 @@ def load_plan(path: Path, schedule: Path | None = None) -> Plan:
     schedule : Path, optional
         A schedule written by another program or by hand, instead of the plan's own.
     """
+    path = path.parent if path.name == PLAN_FILE else path
     if is_plan(path):
         plan = read_plan(path)
         return plan if schedule is None else _with_schedule(plan, schedule)
@@ -52,5 +53,16 @@ def dry_run(plan: Plan, now: dt.datetime | None = None) -> Rehearsal:
             plan.unreachable,
             now or dt.datetime.now().astimezone(),
             earlier,
+            ledger_note=None if plan.ledger is None or earlier else _why_empty(plan.ledger, source.protocol.person),
         )
     )
+
+
+def _why_empty(folder: Path, person: str) -> str:
+    """Say that no earlier pulses are counted, and where they were looked for: a lost ledger must not look like none."""
+    path = ledger_path(folder, person)
+    if not folder.is_dir():
+        return f"no earlier pulses counted: the folder {folder} does not exist (the first run makes it)"
+    if not path.exists():
+        return f"no earlier pulses counted: there is no {path.name} in {folder} (the first run makes it)"
+    return f"no earlier pulses counted: {path} holds none"

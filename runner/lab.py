@@ -5,7 +5,7 @@ from __future__ import annotations
 import datetime as dt
 from typing import Annotated, Any, Final, Literal
 
-from coilwright.geometry.documents import Document, Model, validate
+from coilwright.geometry.documents import Document, Model, Version, validate
 from coilwright.geometry.errors import did_you_mean
 from pydantic import BeforeValidator, Field, WithJsonSchema, field_validator, model_validator
 
@@ -102,7 +102,7 @@ class TemperatureLimits(Model):
 class LabFile(Model):
     """A lab file."""
 
-    coilwright_lab: Literal[1]
+    coilwright_lab: Version
     lab: Annotated[str, Field(min_length=1)]
     highest_output_percent: Annotated[float, Field(gt=0, le=100)] | None = None
     shortest_interval_s: Positive | None = None

@@ -22,17 +22,21 @@ from coilwright.geometry.pose_list import PoseList
 from coilwright.geometry.pose_sets import patch, random_scalp_points
 from coilwright.geometry.reach import LIMIT, Windows, tilt_windows
 from coilwright.geometry.sphere import FIT_RADIUS_MM, NARROW_FIT_RADIUS_MM, RESIDUAL_FINDING_MM, Spheres, fit_spheres
-from coilwright.geometry.surface import Surface, check_head_size, outward
+from coilwright.geometry.surface import Surface, check_head_size, check_winding, outward
 from coilwright.geometry.tables import MISSING, column_texts, floats, read_tsv
 from coilwright.geometry.targets import TargetSpec, read_target_table
 from coilwright.geometry.triangles import dot
-from coilwright.geometry.windings import coil_elements
+from coilwright.geometry.windings import check_x_axis, coil_elements
 
 from .lab import LabFile, parse_lab
 from .protocol import HeadSpec, Protocol, parse_protocol
 
 # A lift over this is worth a look, mm.
 LIFT_FINDING_MM = 2.0
+# The centre of a sphere that stands for a head lies well inside it, mm.
+SPHERE_CENTRE_MM = 30.0
+# A field that stands farther off the wanted direction is worth a look, degrees.
+DIRECTION_FINDING_DEG = 20.0
 # A change of the field between the two sphere fits over this is worth a look.
 FIT_CHANGE_FINDING = 0.10
 
@@ -143,6 +147,11 @@ def read_source(path: Path, inputs: Inputs) -> Source:
         coil = load_coil(protocol.coil, inputs, path, document.at(("coil",)))
     except InputError as error:
         problems += error.lines
+    if coil is not None and coil.file.windings:
+        try:
+            check_x_axis(coil)
+        except InputError as error:
+            problems += [f"{document.at(('coil',))}: {line}" for line in error.lines]
     if problems or coil is None:
         raise InputError(*problems)
     return Source(path, document, protocol, lab, lab_path, coil)
@@ -170,7 +179,9 @@ def read_head(source: Source, inputs: Inputs) -> Head:
     where = source.document.at(("head", "scalp"))
     scalp = _surface(str(spec.scalp), spec, source, inputs, where)
     _within(where, check_head_size, scalp, spec.unit)
+    _within(where, check_winding, scalp)
     scalp, turned = outward(scalp)
+    _check_sphere_in_scalp(source, scalp)
     cortex = tuple(
         _surface(written, spec, source, inputs, source.document.at(("head", "cortex"))) for written in spec.cortex
     )
@@ -313,14 +324,18 @@ def _region_poses(source: Source, head: Head) -> tuple[PoseList, list[Finding]]:
     points = random_scalp_points(head.scalp, where, region.poses, draws)
     low, high = region.midline_deg
     angles = low + (high - low) * draws.unit(region.poses)
-    standing = stand(
-        head.scalp,
-        points,
-        Directions.midline(angles),
-        standoff_mm=protocol.standoff_mm,
-        normal_radius_mm=protocol.placement.normal_radius_mm,
-        turned=source.coil.turned,
-    )
+    try:
+        standing = stand(
+            head.scalp,
+            points,
+            Directions.midline(angles),
+            standoff_mm=protocol.standoff_mm,
+            normal_radius_mm=protocol.placement.normal_radius_mm,
+            turned=source.coil.turned,
+        )
+    except ItemError as error:
+        count, reason = len(error.problems), error.problems[0][1].split(";")[0]
+        raise InputError(f"{count} of {region.poses} random poses cannot stand: {reason}; move or shrink it") from None
     lifted = _lift(source, head, standing)
     width = max(3, len(str(region.poses)))
     names = [f"region-{i + 1:0{width}d}" for i in range(region.poses)]
@@ -335,6 +350,18 @@ def _spheres(source: Source, head: Head, at: FloatArray) -> Spheres:
     if given:
         return Spheres.given(given.centre_mm, given.radius_mm, len(at))
     return fit_spheres(head.scalp, at)
+
+
+def _check_sphere_in_scalp(source: Source, scalp: Surface) -> None:
+    given = source.protocol.head.sphere
+    if given is None:
+        return
+    inside = -float(scalp.signed_distance(np.array([given.centre_mm]))[0])
+    if not inside > SPHERE_CENTRE_MM:
+        raise InputError(
+            f"{source.document.at(('head', 'sphere'))}: its centre lies {inside:.0f} mm inside the scalp, expected at"
+            f" least {SPHERE_CENTRE_MM:g}; check the frame and unit of centre_mm"
+        )
 
 
 def _check_cortex_in_sphere(source: Source, head: Head) -> None:
@@ -387,18 +414,30 @@ def _field_columns(
         "field_per_slope": dot(e, standing.wanted),
     }
     if source.protocol.head.sphere:
-        return columns, []
+        return columns, _direction_findings(columns["direction_error_deg"])
     narrow = field(fit_spheres(head.scalp, nearest, within_mm=NARROW_FIT_RADIUS_MM).centres)
     change = np.linalg.norm(narrow - e, axis=1) / np.linalg.norm(e, axis=1)
     worst = int(change.argmax())
+    found = _direction_findings(columns["direction_error_deg"])
     if not change[worst] > FIT_CHANGE_FINDING:
-        return columns, []
+        return columns, found
     words = (
         f"the field changes by up to {change[worst]:.0%} between spheres fitted within {NARROW_FIT_RADIUS_MM:g}"
         f" and {FIT_RADIUS_MM:g} mm (target {worst + 1} of {len(points)}): the head is far from a sphere there; read"
         " its field with care"
     )
-    return columns, [Finding("sphere", words)]
+    return columns, [*found, Finding("sphere", words)]
+
+
+def _direction_findings(error_deg: FloatArray) -> list[Finding]:
+    worst = int(error_deg.argmax())
+    if error_deg[worst] <= DIRECTION_FINDING_DEG:
+        return []
+    words = (
+        f"at target {worst + 1} of {len(error_deg)} it stands {error_deg[worst]:.0f} degrees off the wanted direction"
+        f" (over {DIRECTION_FINDING_DEG:g}): the target is deep or off to the side of the coil"
+    )
+    return [Finding("field", words)]
 
 
 def _sphere_findings(spheres: Spheres, names: list[str]) -> list[Finding]:
@@ -468,4 +507,4 @@ def _reach(source: Source, lifted: Lifted) -> tuple[FloatArray, list[str]]:
 
 
 def _distance(value: float) -> str:
-    return f"{value:.1f} mm away" if value >= 0 else f"entered by {-value:.1f} mm"
+    return f"{value:.2f} mm away" if value >= 0 else f"entered by {-value:.1f} mm"

@@ -24,6 +24,7 @@ from .schedule import COLUMNS, Schedule, build_schedule, output_levels, read_sch
 PLAN_FILE: Final = "plan.json"
 SCHEMA: Final = 1
 POSES, SCHEDULE = "poses.tsv", "schedule.tsv"
+FROZEN: Final = (POSES, "poses.json", SCHEDULE)
 POSE_FILES: Final = (POSES, "poses.json", "matrices.json", "tilt.tsv", "tilt.json")
 TILT_COLUMNS: Final = {
     "pose": Column("Name of the pose in poses.tsv; poses that cannot be reached have no window"),
@@ -79,10 +80,13 @@ def plan_schedule(planned: Planned) -> Schedule:
     source, rows = planned.source, np.flatnonzero(planned.reachable)
     names = tuple(planned.poses.names[i] for i in rows)
     step = source.coil.file.output_step_percent
-    if not names:
+    try:
+        if names:
+            return build_schedule(source.protocol, names, planned.poses.pose.origin[rows], step_percent=step)
         nothing = np.empty(0, dtype=np.int64)
         return Schedule(nothing, nothing, nothing, nothing, nothing, (), output_levels(source.protocol, step)[1])
-    return build_schedule(source.protocol, names, planned.poses.pose.origin[rows], step_percent=step)
+    except InputError as error:
+        raise InputError(*map(source.document.located, error.lines)) from None
 
 
 def pose_files(planned: Planned, progress: Callable[[int], None] | None = None) -> dict[str, bytes]:
@@ -229,6 +233,10 @@ def _plan_content(folder: Path) -> dict[str, Any]:
     names = [*content["files"], *content["inputs"], content["protocol"]]
     if any(Path(name).name != name for name in names):
         raise InputError(f"{path}: names a file outside the plan; make the plan anew")
+    lost = [n for n in FROZEN if n not in content["files"]]
+    lost += [content["protocol"]] if content["protocol"] not in content["inputs"] else []
+    if lost:
+        raise InputError(f"{path}: records no hash of {', '.join(lost)}; make the plan anew")
     return dict(content)
 
 

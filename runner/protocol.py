@@ -5,9 +5,10 @@ from __future__ import annotations
 from decimal import Decimal
 from typing import Annotated, Any, Literal
 
-from coilwright.geometry.documents import AlsoAccepts, Document, Model, NumberOrPair, Vector3, validate
+from coilwright.geometry.documents import AlsoAccepts, Document, Model, NumberOrPair, Vector3, Version, validate
 from coilwright.geometry.errors import InputError
-from coilwright.geometry.targets import Name, TargetSpec
+from coilwright.geometry.names import Name
+from coilwright.geometry.targets import TargetSpec
 from pydantic import BeforeValidator, Discriminator, Field, Tag, field_validator, model_validator
 
 from .lab import Pattern
@@ -24,6 +25,13 @@ class SphereSpec(Model):
 
     centre_mm: Vector3
     radius_mm: Annotated[float, Field(ge=40, le=200)]
+
+
+def _decimals(value: float, most: int, what: str) -> float:
+    """Refuse more decimals than are kept, instead of rounding."""
+    if Decimal(str(value)).normalize().as_tuple().exponent < -most:  # type: ignore[operator]  # finite, so an integer
+        raise ValueError(f"at most {most} decimals ({what}), got {value!r}")
+    return value
 
 
 def _one_or_many(value: Any) -> Any:
@@ -122,9 +130,14 @@ class ReachSpec(Model):
 class ThresholdSpec(Model):
     """A motor threshold, as output of the stimulator."""
 
-    output_percent: Annotated[float, Field(gt=0, le=100)]
+    output_percent: Annotated[float, Field(ge=1, le=100)]
     kind: Literal["resting", "active"]
     method: Literal["emg", "visible_twitch"]
+
+    @field_validator("output_percent")
+    @classmethod
+    def _three_decimals(cls, percent: float) -> float:
+        return _decimals(percent, 3, "thousandths of a percent")
 
 
 def _one_or_two(value: Any) -> Any:
@@ -189,6 +202,8 @@ class PulsesSpec(Model):
             raise ValueError(f"the longest {high:g} is below the shortest {low:g}; give [shortest, longest]")
         if not (low > 0 and high <= 2000):
             raise ValueError(f"expected more than 0 and at most 2000 seconds, got {low:g} to {high:g}")
+        for value in interval:
+            _decimals(value, 6, "microseconds")
         return interval
 
     @field_validator("threshold_percent", "output_percent")
@@ -197,6 +212,13 @@ class PulsesSpec(Model):
         if levels and len(set(levels)) < len(levels):
             raise ValueError("an intensity is there twice; raise per_pose instead")
         return levels
+
+    @field_validator("train")
+    @classmethod
+    def _whole_microseconds(cls, train: TrainSpec | None) -> TrainSpec | None:
+        if train is not None:
+            _decimals(train.pause_s, 6, "microseconds")
+        return train
 
     @model_validator(mode="after")
     def _one_of_each(self) -> PulsesSpec:
@@ -233,7 +255,7 @@ def _gate(value: Any) -> Any:
 class Protocol(Model):
     """A protocol file; every key is described in docs/protocol.md."""
 
-    coilwright: Literal[1]
+    coilwright: Version
     title: Annotated[str, Field(min_length=1, max_length=200)]
     person: Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]{0,31}$")]
     head: HeadSpec
@@ -267,6 +289,12 @@ class Protocol(Model):
         kinds = [item.kind for item in thresholds]
         if len(set(kinds)) < len(kinds):
             raise ValueError("two thresholds of one kind; give one, or one resting and one active")
+        by_kind = {item.kind: item.output_percent for item in thresholds}
+        if len(by_kind) == 2 and not by_kind["active"] <= by_kind["resting"]:
+            raise ValueError(
+                f"the active threshold {by_kind['active']:g} is above the resting one {by_kind['resting']:g}; a muscle"
+                " that is tense answers to less, so one of them is wrong"
+            )
         return thresholds
 
     @model_validator(mode="after")

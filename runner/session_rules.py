@@ -74,6 +74,8 @@ def _window(case: Case, rule: str, key: str, limit: int | None) -> Check:
     item = at_most(rule, float(earlier + len(case.schedule)), limit)
     if item.verdict == "exceeded" and limit is not None:
         item = item.but(note=f"{earlier} earlier pulses leave {max(0, limit - earlier)}")
+    if item.verdict == "within" and case.ledger_note:
+        item = item.but(note=case.ledger_note)
     return _not_set(item, key)
 
 

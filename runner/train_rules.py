@@ -208,11 +208,31 @@ def theta_burst(case: Case) -> Check:
     most_percent, most_pulses, approval = float(values["most_percent"]), float(values["most_pulses"]), None
     if percent is None:  # too many pulses at any intensity: no missing threshold hides that
         return with_approval(case, at_most("theta_burst", float(pulses), most_pulses, pulse=pulse, unit="pulses"), None)
-    if percent > most_percent * MILLI or pulses > most_pulses:
+    if percent > most_percent * MILLI or pulses > most_pulses or _close_bursts(case, bursts):
         approval = case.approvals.find("theta_burst", percent=percent / MILLI, pattern=pattern)
     if approval and approval.threshold_percent is not None:
         most_percent, most_pulses = max(most_percent, approval.threshold_percent), max(most_pulses, approval.up_to)
+    close = _close_bursts(case, bursts)
+    if close is not None and approval is None:
+        return close
     by_percent = at_most("theta_burst", percent / MILLI, most_percent, pulse=pulse)
     by_pulses = at_most("theta_burst", float(pulses), most_pulses, pulse=pulse, unit="pulses")
     item = by_pulses if pulses / most_pulses > percent / MILLI / most_percent else by_percent
     return with_approval(case, item, approval)
+
+
+def _close_bursts(case: Case, bursts: Trains) -> Check | None:
+    """Theta burst trains that begin sooner after each other than described, or None."""
+    every = float(published()["theta_burst"]["intermittent"]["every_s"])
+    gaps = np.diff(case.schedule.onset_us[bursts.first]) / US
+    if not gaps.size or gaps.min() >= every * (1 - published()["trains_found"]["relative_tolerance"]):
+        return None
+    at = int(gaps.argmin())
+    return at_least(
+        "theta_burst",
+        float(gaps[at]),
+        every,
+        unit="s",
+        pulse=pulse_number(bursts.first[at + 1]),
+        note=f"a new train every {every:g} s was described",
+    )

@@ -55,10 +55,10 @@ def read(data: bytes, name: str) -> PoseList:
         content = json.loads(data, object_pairs_hook=unique)
         frame = (content["frame"], content["axes"], content["unit"])
         matrices, origin = content["head_from_coil"], content["origin"]
-        names, values = list(matrices), np.array(list(matrices.values()), dtype=np.float64)
+        names, values = list(matrices), np.array([_numbers(rows) for rows in matrices.values()], dtype=np.float64)
     except InputError:
         raise
-    except (ValueError, KeyError, TypeError, AttributeError, RecursionError) as error:
+    except (ValueError, KeyError, TypeError, AttributeError, RecursionError, OverflowError) as error:
         raise InputError(f"{name}: not a file of matrices ({error!r})") from None
     if frame != ("head", "RAS", "mm"):
         raise InputError(f"{name}: expected frame head, axes RAS, unit mm; got {', '.join(map(str, frame))}")
@@ -72,3 +72,11 @@ def read(data: bytes, name: str) -> PoseList:
         )
     except InputError as error:
         raise InputError(*(f"{name}: {line}" for line in error.lines)) from None
+
+
+def _numbers(rows: Any) -> Any:
+    """Rows of plain numbers; text and true or false are refused, not turned into numbers."""
+    for row in rows:
+        if any(type(value) not in (int, float) for value in row):
+            raise TypeError(f"expected rows of four numbers, got {row!r:.80}")
+    return rows

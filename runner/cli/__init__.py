@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import os
 import sys
 from importlib import import_module
 
 import click
 
+INTERRUPTED = 130
 # name: module, one line of help. The order is that of a session.
 COMMANDS = {
     "demo": ("plan", "Copy the invented example and take it through every step."),
@@ -23,6 +25,7 @@ COMMANDS = {
     "limits": ("look", "Print every published limit with its source."),
     "schema": ("look", "Print the JSON Schema of a file, for editors."),
 }
+LATER = ("run", "resume", "audit", "scalp", "register", "design", "report")
 _ATTRIBUTES = {"dry-run": "dry_run_command", "import": "import_command"}
 
 
@@ -48,6 +51,8 @@ class LazyGroup(click.Group):
         if args and args[0] not in COMMANDS and not args[0].startswith("-"):
             from coilwright.geometry.errors import did_you_mean
 
+            if args[0] in LATER:
+                ctx.fail(f"{args[0]!r} is not in this version yet")
             ctx.fail(f"no command {args[0]!r}{did_you_mean(args[0], COMMANDS)}")
         return super().resolve_command(ctx, args)
 
@@ -73,19 +78,25 @@ def main() -> None:
     """Run the command line; bad input is one line each on standard error and exit code 2."""
     from coilwright.geometry.errors import InputError
 
+    code = 0
     try:
-        code = cli(standalone_mode=False)
+        # Not cli(...): click turns a reader that goes away into exit code 1, which means a fault in the program.
+        with cli.make_context("coilwright", sys.argv[1:]) as context:
+            cli.invoke(context)
+        sys.stdout.flush()
+    except click.exceptions.Exit as done:
+        code = done.exit_code
     except InputError as error:
         for line in error.lines:
             click.echo(f"error: {line}", err=True)
-        sys.exit(2)
-    except click.exceptions.Abort:
+        code = 2
+    except (KeyboardInterrupt, click.exceptions.Abort):
         click.echo("interrupted", err=True)
-        sys.exit(130)
+        code = INTERRUPTED
     except click.ClickException as error:
         error.show()
-        sys.exit(error.exit_code)
-    except BrokenPipeError:
-        sys.stderr.close()  # the reader has gone; there is nobody to tell
-        sys.exit(0)
-    sys.exit(code if isinstance(code, int) else 0)
+        code = error.exit_code
+    except BrokenPipeError:  # the reader has gone; what it did not read may have been the verdict
+        sys.stdout = open(os.devnull, "w")  # noqa: PTH123, SIM115 - held until the program ends, so that nothing is flushed
+        code = INTERRUPTED
+    sys.exit(code)
