@@ -18,7 +18,7 @@ from .chunks import in_chunks
 from .frames import FloatArray, IntArray, invert_rigid, transform_points
 from .solids import Solid
 from .surface import Surface
-from .triangles import dot
+from .triangles import dot, split_in_four
 
 # How far a reported distance may be above the true one, mm.
 DISTANCE_TOLERANCE_MM: Final = 1e-6
@@ -98,27 +98,24 @@ def least_distance(
     return best
 
 
+def distance_bounds(solid: Solid, triangles: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Return for each triangle (K, 3, 3) the distance at its middle, and a lower bound of it over the triangle."""
+    middle = triangles.mean(axis=1)
+    value, slope = solid.distance_and_gradient(middle)
+    return value, value + dot(slope[:, None], triangles - middle[:, None]).min(axis=1)
+
+
 def _refine(solid: Solid, triangles: FloatArray, owner: IntArray, best: FloatArray) -> None:
     """Lower `best` to the least distance of the triangles to one solid."""
     for _ in range(_MOST_ROUNDS):
         if not len(triangles):
             return
-        middle = triangles.mean(axis=1)
-        value, slope = solid.distance_and_gradient(middle)
+        value, lowest = distance_bounds(solid, triangles)
         np.minimum.at(best, owner, value)
-        lowest = value + dot(slope[:, None], triangles - middle[:, None]).min(axis=1)
         keep = (lowest < best[owner] - DISTANCE_TOLERANCE_MM) & (best[owner] >= 0)
-        triangles, owner = _split(triangles[keep]), np.tile(owner[keep], 4)
+        triangles, owner = split_in_four(triangles[keep]), np.tile(owner[keep], 4)
         np.minimum.at(best, owner, solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1))
     raise ArithmeticError("a distance did not converge")  # outside a solid each round halves the bounds at least
-
-
-def _split(triangles: FloatArray) -> FloatArray:
-    """Split each triangle in four at the middles of its sides."""
-    a, b, c = triangles[:, 0], triangles[:, 1], triangles[:, 2]
-    ab, bc, ca = (a + b) / 2, (b + c) / 2, (c + a) / 2
-    parts = [(a, ab, ca), (ab, b, bc), (ca, bc, c), (ab, bc, ca)]
-    return np.concatenate([np.stack(part, axis=1) for part in parts])
 
 
 def clearances(

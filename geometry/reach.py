@@ -18,11 +18,11 @@ from typing import Final
 import numpy as np
 
 from .chunks import in_chunks
-from .clearance import Obstacle, near_triangles
+from .clearance import Obstacle, distance_bounds, near_triangles
 from .errors import InputError
 from .frames import FloatArray, IntArray
 from .solids import Solid
-from .triangles import dot
+from .triangles import dot, split_in_four
 
 # Windows are found to this and reported short of it, so that a reported tilt is never too wide. 0.011 degrees.
 ANGLE_TOLERANCE_RAD: Final = 2e-4
@@ -177,9 +177,7 @@ def _could_meet(turns: _Turns, lowest: FloatArray, lever: FloatArray) -> tuple[I
 
 def _tighten(turns: _Turns, triangles: FloatArray) -> None:
     """Lower the bounds to the first contact of the triangles: by their corners first, which is quick, then exactly."""
-    middle = triangles.mean(axis=1)
-    value, slope = turns.solid.distance_and_gradient(middle)
-    lowest = value + dot(slope[:, None], triangles - middle[:, None]).min(axis=1)
+    lowest = distance_bounds(turns.solid, triangles)[1]
     farthest = np.sqrt(dot(triangles, triangles).max(axis=1))
     near = lowest - turns.keep < 2 * farthest * np.sin(min(float(turns.bound.max()), np.pi) / 2)
     triangles, lowest = triangles[near], lowest[near]
@@ -213,9 +211,8 @@ def _advance_triangles(turns: _Turns, triangles: FloatArray, which: IntArray) ->
         if not len(triangles):
             return
         seen = turns.turned(triangles, which, angle)
-        middle = seen.mean(axis=1)
-        value, slope = turns.solid.distance_and_gradient(middle)
-        gap = value + dot(slope[:, None], seen - middle[:, None]).min(axis=1) - turns.keep
+        value, lowest = distance_bounds(turns.solid, seen)
+        gap = lowest - turns.keep
         touching = value - turns.keep <= CONTACT_MM
         turns.contact(which[touching], angle[touching])
         loose = ~touching & (gap < 0.5 * (value - turns.keep))
@@ -223,13 +220,7 @@ def _advance_triangles(turns: _Turns, triangles: FloatArray, which: IntArray) ->
         angle = angle + step
         go_on = ~touching & (angle < turns.bound[which] - ANGLE_TOLERANCE_RAD)
         whole, split = go_on & ~loose, go_on & loose
-        triangles = np.concatenate([triangles[whole], *_quarters(triangles[split])])
-        which = np.concatenate([which[whole], *[which[split]] * 4])
-        angle = np.concatenate([angle[whole], *[angle[split]] * 4])
+        triangles = np.concatenate([triangles[whole], split_in_four(triangles[split])])
+        which = np.concatenate([which[whole], np.tile(which[split], 4)])
+        angle = np.concatenate([angle[whole], np.tile(angle[split], 4)])
     raise ArithmeticError("a tilt did not converge")  # each round halves a triangle or closes a share of the gap
-
-
-def _quarters(triangles: FloatArray) -> list[FloatArray]:
-    a, b, c = triangles[:, 0], triangles[:, 1], triangles[:, 2]
-    ab, bc, ca = (a + b) / 2, (b + c) / 2, (c + a) / 2
-    return [np.stack(part, axis=1) for part in ((a, ab, ca), (ab, b, bc), (ca, bc, c), (ab, bc, ca))]
