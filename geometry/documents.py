@@ -24,7 +24,7 @@ Place: TypeAlias = "tuple[int, int]"
 
 DEEPEST_NESTING: Final = 40
 # Tags of unions in models: pydantic puts them into paths, no message shows them.
-UNION_TAGS: Final = ("<file>", "<list>")
+UNION_TAGS: Final = ("<file>", "<list>", "<word>", "<keys>")
 LARGEST_NUMBER: Final = 1e300
 # No head, coil or room is larger.
 FARTHEST_MM: Final = 1e5

@@ -52,7 +52,7 @@ class Case:
     @cached_property
     def trains(self) -> Trains:
         """All trains, declared or found."""
-        return find_trains(self.schedule, self.protocol.pulses.pattern)
+        return find_trains(self.schedule, self.protocol.fired.pattern)
 
     @cached_property
     def ordinary(self) -> Trains:

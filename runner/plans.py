@@ -203,12 +203,15 @@ def read_plan(folder: Path) -> Plan:
 def schedule_for(source: Source, poses: PoseList, path: Path) -> Schedule:
     """Read a schedule file against a protocol and its poses; see `schedule.read_schedule`."""
     step = source.coil.file.output_step_percent
-    train = source.protocol.pulses.train
+    try:
+        train, threshold = source.protocol.fired.train, output_levels(source.protocol, step)[1]
+    except InputError as error:
+        raise InputError(*map(source.document.located, error.lines)) from None
     return read_schedule(
         read_bytes(path),
         str(path),
         reachable=dict(zip(poses.names, poses.reachable(), strict=True)),
-        threshold_milli=output_levels(source.protocol, step)[1],
+        threshold_milli=threshold,
         step_percent=step,
         rate_hz=train.rate_hz if train else None,
     )

@@ -248,15 +248,11 @@ class GateSpec(Model):
     settle_ms: Annotated[float, Field(ge=0, le=60_000)]
 
 
-def _gate(value: Any) -> Any:
-    return None if value == "none" else value
-
-
 class Protocol(Model):
     """A protocol file; every key is described in docs/protocol.md."""
 
     coilwright: Version
-    title: Annotated[str, Field(min_length=1, max_length=200)]
+    title: Annotated[str, Field(min_length=1, max_length=200)] = "untitled"
     person: Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9_-]{0,31}$")]
     head: HeadSpec
     coil: Annotated[str, Field(min_length=1)]
@@ -274,13 +270,15 @@ class Protocol(Model):
         BeforeValidator(_one_or_two),
         AlsoAccepts(),
     ] = ()
-    pulses: PulsesSpec
+    pulses: PulsesSpec | None = None
     order: OrderSpec = OrderSpec()
-    gate: Annotated[
-        GateSpec | None,
-        BeforeValidator(_gate),
-        AlsoAccepts({"const": "none"}),
-    ]
+    gate: (
+        Annotated[
+            Annotated[Literal["none"], Tag("<word>")] | Annotated[GateSpec, Tag("<keys>")],
+            Discriminator(lambda value: "<word>" if isinstance(value, str) else "<keys>"),
+        ]
+        | None
+    ) = None
     limits: str | None = None
 
     @field_validator("threshold")
@@ -301,11 +299,25 @@ class Protocol(Model):
     def _fits_together(self) -> Protocol:
         if not self.targets and self.region is None:
             raise ValueError("targets, region: both missing; give targets, a region, or both")
+        if self.pulses is None:
+            return self
         if self.pulses.threshold_percent is not None and not self.threshold:
             raise ValueError("threshold: missing; pulses.threshold_percent is a share of it")
         if self.reference_kind is None and (self.pulses.percent_of or self.pulses.threshold_percent):
             raise ValueError(f"pulses.percent_of: there is no {self.pulses.percent_of} threshold")
         return self
+
+    @property
+    def fired(self) -> PulsesSpec:
+        """What is fired at each pose; a protocol that only places has none.
+
+        Raises
+        ------
+        InputError
+        """
+        if self.pulses is None:
+            raise InputError("pulses: missing; a schedule needs to know what is fired (placing does not)")
+        return self.pulses
 
     @property
     def reference_kind(self) -> str | None:
@@ -314,9 +326,10 @@ class Protocol(Model):
         The one that is named; else the only one; else the active one for theta burst, the resting one otherwise.
         """
         kinds = [item.kind for item in self.threshold]
-        named = self.pulses.percent_of
+        pulses = self.pulses
+        named = pulses.percent_of if pulses else None
         if named is None and len(kinds) == 2:
-            named = "active" if self.pulses.pattern else "resting"
+            named = "active" if pulses and pulses.pattern else "resting"
         if named is None:
             return kinds[0] if kinds else None
         return named if named in kinds else None
@@ -340,13 +353,10 @@ def parse_protocol(document: Document) -> Protocol:
     >>> parse_protocol(read_yaml(b"coilwright: 1", "p.yaml"))
     Traceback (most recent call last):
     ...
-    coilwright.geometry.errors.InputError: p.yaml:1:1: title: missing; this key is required
-    p.yaml:1:1: person: missing; this key is required
+    coilwright.geometry.errors.InputError: p.yaml:1:1: person: missing; this key is required
     p.yaml:1:1: head: missing; this key is required
     p.yaml:1:1: coil: missing; this key is required
     p.yaml:1:1: standoff_mm: missing; this key is required
-    p.yaml:1:1: pulses: missing; this key is required
-    p.yaml:1:1: gate: missing; this key is required
     """
     problems: list[str] = []
     try:

@@ -126,7 +126,7 @@ def output_levels(protocol: Protocol, step_percent: float) -> tuple[list[int], i
     """
     threshold = protocol.threshold_of(protocol.reference_kind)
     step = Decimal(str(step_percent))
-    pulses = protocol.pulses
+    pulses = protocol.fired
     if pulses.output_percent is not None:
         wanted = [Decimal(str(value)) for value in pulses.output_percent]
     else:
@@ -160,7 +160,7 @@ def build_schedule(
         No pose to fire at, an order that does not exist, too many pulses.
     """
     levels, threshold = output_levels(protocol, step_percent)
-    order, pulses = protocol.order, protocol.pulses
+    order, pulses = protocol.order, protocol.fired
     if not pose_names:
         raise InputError("no pose of this protocol can be reached; there is nothing to schedule")
     offsets, trains = _visit(protocol)
@@ -195,7 +195,7 @@ def build_schedule(
 
 def _visit(protocol: Protocol) -> tuple[IntArray, IntArray]:
     """Onsets within one visit, us, and the number of the train of each pulse (0: a single pulse)."""
-    pulses = protocol.pulses
+    pulses = protocol.fired
     if pulses.train:
         return train_offsets(pulses.train.rate_hz, pulses.train.pulses), np.ones(pulses.train.pulses, dtype=np.int64)
     if pulses.pattern:
@@ -243,7 +243,7 @@ def theta_burst_offsets(pattern: str) -> tuple[IntArray, IntArray]:
 def _starts(protocol: Protocol, count: int, offsets: IntArray) -> IntArray:
     """Onset of each visit, us."""
     gaps = _gaps(protocol, count - 1, offsets)
-    rest = protocol.pulses.rest
+    rest = protocol.fired.rest
     if rest:
         done = (np.arange(count - 1) + 1) * len(offsets)
         gaps = gaps + _rests(done, rest.after_pulses, len(offsets)) * _microseconds(
@@ -259,7 +259,7 @@ def _rests(done: IntArray, after: int, per_visit: int) -> IntArray:
 
 def _gaps(protocol: Protocol, count: int, offsets: IntArray) -> IntArray:
     """From the start of each visit to the start of the next, us, without rests."""
-    pulses, draws = protocol.pulses, Draws(protocol.order.seed, "interval")
+    pulses, draws = protocol.fired, Draws(protocol.order.seed, "interval")
     if pulses.interval_s:
         low, high = (_microseconds(value, "pulses.interval_s") for value in pulses.interval_s)
         return low + draws.below(high - low + 1, count)

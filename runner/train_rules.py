@@ -196,7 +196,7 @@ def train_intensity(case: Case) -> Check:
 def theta_burst(case: Case) -> Check:
     """Hold theta burst against its original description."""
     bursts = case.trains.chosen(case.trains.theta_burst)
-    pattern, values = case.protocol.pulses.pattern, published()["theta_burst"]
+    pattern, values = case.protocol.fired.pattern, published()["theta_burst"]
     if not len(bursts):
         return nothing_to_check("theta_burst", "no theta burst in this schedule")
     at = int(bursts.output_milli.argmax())

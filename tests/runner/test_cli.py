@@ -502,3 +502,25 @@ def test_outputs_of_different_protocols_do_not_mix(study: Study, cli: Cli, tmp_p
         "field", tmp_path / "a/poses.tsv", "--protocol", study.protocol, "--at", points, "-o", tmp_path / "f.tsv"
     )
     assert "made for the coil figure8-generic, the protocol names other" in done.err
+
+
+def test_a_protocol_that_only_places(study: Study, cli: Cli, tmp_path: Path) -> None:
+    study.write({"pulses": None, "order": None, "gate": None, "threshold": None, "limits": None, "title": None})
+    assert cli("place", study.protocol, "-o", tmp_path / "poses").code == 0
+    for command in (["dry-run", study.protocol], ["schedule", study.protocol, "-o", tmp_path / "plan"]):
+        assert cli(*command).errors == [
+            f"{study.protocol}:1:1: pulses: missing; a schedule needs to know what is fired (placing does not)"
+        ]
+
+
+@pytest.mark.parametrize(
+    ("gate", "message"),
+    [
+        ("some", "gate: expected one of 'none', got the text 'some'"),
+        ({"position_mm": 2}, "gate.angle_deg: missing; this key is required"),
+        (3, "gate: expected keys and values, got the number 3"),
+    ],
+)
+def test_gates(study: Study, cli: Cli, gate: Any, message: str) -> None:
+    study.write({"gate": gate})
+    assert message in "\n".join(cli("dry-run", study.protocol).errors)
