@@ -16,6 +16,7 @@ from coilwright.runner.schedule import (
     SHAM,
     Schedule,
     build_schedule,
+    milli,
     percent_text,
     read_schedule,
     rounded_down,
@@ -336,3 +337,42 @@ def test_empty_and_headless_schedules_are_refused() -> None:
     with pytest.raises(InputError, match="but the protocol has no threshold"):
         read(HEADER + ROW_1, threshold_milli=None)
     assert percent_text(50_000, None) == "n/a"
+
+
+# Less common ways ---------------------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(("pattern", "step"), [("intermittent_theta_burst", 200), ("continuous_theta_burst", 40)])
+def test_patterns_follow_each_other_at_the_next_full_ten_seconds(pattern: str, step: int) -> None:
+    s = build(2, pulses__interval_s=None, pulses__pattern=pattern, pulses__per_pose=1)
+    assert len(s) == 1200
+    assert s.onset_us[600] == step * 1_000_000
+    assert s.train[-1] == 2 * s.train[599]
+    assert s.rate_hz is None
+
+
+def test_outputs_given_as_such_need_no_threshold() -> None:
+    s = build(pulses__threshold_percent=None, pulses__output_percent=[55.9, 60], threshold=None)
+    assert sorted(set(s.output_milli.tolist())) == [55_000, 60_000]
+    assert s.threshold_milli is None
+    assert "\tn/a\t" in write_schedule(s).decode()
+
+
+def test_what_cannot_be_a_schedule() -> None:
+    with pytest.raises(InputError, match="no pose of this protocol can be reached"):
+        build(0)
+    with pytest.raises(InputError, match="at most 20000000 make a session"):
+        build(100, pulses__per_pose=1_000_000)
+    with pytest.raises(InputError, match=r"output_step_percent: expected a multiple of 0.001, got 0.0015"):
+        rounded_down(Decimal(50), Decimal("0.0015"))
+    with pytest.raises(InputError, match=r"at most three decimals, got 50.0005"):
+        milli(50.0005, "output_percent")
+    with pytest.raises(InputError, match=r"pulses.rest.minutes: at most six decimals"):
+        build(pulses__rest={"after_pulses": 1, "minutes": 1.00000001})
+
+
+def test_a_percentage_that_is_none() -> None:
+    with pytest.raises(InputError, match="threshold_percent: expected a number or n/a, got 'much'"):
+        read(HEADER + ROW_1.replace("108.696", "much"))
+    assert read(HEADER + ROW_1 + "2\t5\ta\t50\tn/a\tactive\tn/a\n").duration_us == 5_000_000
+    assert read(HEADER + ROW_1).duration_us == 0
