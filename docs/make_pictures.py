@@ -13,7 +13,8 @@ import numpy as np
 mpl.use("Agg")
 import matplotlib.pyplot as plt
 from coilwright.geometry.files import Inputs
-from coilwright.runner.planning import Planned, plan_poses, read_source
+from coilwright.runner.planning import Planned, plan_poses
+from coilwright.runner.sources import read_source
 from matplotlib.collections import PolyCollection
 
 HERE = Path(__file__).parent

@@ -10,9 +10,10 @@ from coilwright.geometry.files import Inputs, write_files
 
 from .dry_run import dry_run, load_plan
 from .exporting import export_files
-from .planning import Planned, plan_poses, read_source
+from .planning import Planned, plan_poses
 from .plans import POSE_FILES, plan_files, plan_schedule
 from .rehearsal import Rehearsal
+from .sources import read_source
 
 
 @dataclass(frozen=True)

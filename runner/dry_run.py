@@ -9,9 +9,10 @@ from coilwright.geometry.files import Inputs
 
 from .case import Case
 from .ledger import ledger_path, read_ledger
-from .planning import plan_poses, read_source
+from .planning import plan_poses
 from .plans import PLAN_FILE, Plan, is_plan, ledger_folder, plan_schedule, read_plan, schedule_for
 from .rehearsal import Rehearsal, rehearse
+from .sources import read_source
 
 
 def load_plan(path: Path, schedule: Path | None = None) -> Plan:

@@ -17,7 +17,7 @@ from coilwright.geometry.tables import Column, floats, read_tsv, sidecar_bytes
 from coilwright.geometry.windings import Elements, coil_elements
 
 from .exporting import read_poses
-from .planning import Source, read_head, read_source, read_targets
+from .sources import Source, read_head, read_source, read_targets
 
 COLUMNS: Final = {
     "pose": Column("Name of the pose"),

@@ -4,76 +4,32 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
-from pathlib import Path
 
 import numpy as np
 from coilwright.geometry.clearance import DISTANCE_TOLERANCE_MM, Lifted, Obstacle, clearances, lift_clear
-from coilwright.geometry.coil import Coil, load_coil
-from coilwright.geometry.documents import Document, read_yaml
 from coilwright.geometry.draws import Draws
 from coilwright.geometry.errors import Finding, InputError, ItemError
 from coilwright.geometry.field import check_inside, field_at_targets
 from coilwright.geometry.files import Inputs
-from coilwright.geometry.frames import FloatArray, angle_between_deg, points_to_ras_mm
-from coilwright.geometry.mesh_files import parse_surface
-from coilwright.geometry.phantom import phantom_cortex, phantom_scalp
+from coilwright.geometry.frames import FloatArray, angle_between_deg
 from coilwright.geometry.placement import Directions, Standing, check_targets, place, scalp_quality, stand
 from coilwright.geometry.pose_list import PoseList
 from coilwright.geometry.pose_sets import patch, random_scalp_points
 from coilwright.geometry.reach import LIMIT, Windows, tilt_windows
 from coilwright.geometry.sphere import FIT_RADIUS_MM, NARROW_FIT_RADIUS_MM, RESIDUAL_FINDING_MM, Spheres, fit_spheres
-from coilwright.geometry.surface import Surface, check_head_size, check_winding, outward
-from coilwright.geometry.tables import MISSING, column_texts, floats, read_tsv
-from coilwright.geometry.targets import TargetSpec, read_target_table
+from coilwright.geometry.tables import MISSING, column_texts
+from coilwright.geometry.targets import TargetSpec
 from coilwright.geometry.triangles import dot
-from coilwright.geometry.windings import check_x_axis, coil_elements
+from coilwright.geometry.windings import coil_elements
 
-from .lab import LabFile, parse_lab
-from .protocol import HeadSpec, Protocol, parse_protocol
+from .sources import Head, Source, read_head, read_targets
 
 # A lift over this is worth a look, mm.
 LIFT_FINDING_MM = 2.0
-# The centre of a sphere that stands for a head lies well inside it, mm.
-SPHERE_CENTRE_MM = 30.0
 # A field that stands farther off the wanted direction is worth a look, degrees.
 DIRECTION_FINDING_DEG = 20.0
 # A change of the field between the two sphere fits over this is worth a look.
 FIT_CHANGE_FINDING = 0.10
-
-
-@dataclass(frozen=True)
-class Source:
-    """A protocol with everything that its files say, read once.
-
-    Attributes
-    ----------
-    path : Path
-        Of the protocol.
-    document : Document
-    protocol : Protocol
-    lab : LabFile or None
-    lab_path : Path or None
-        The ledger's folder is relative to it.
-    coil : Coil
-    """
-
-    path: Path
-    document: Document
-    protocol: Protocol
-    lab: LabFile | None
-    lab_path: Path | None
-    coil: Coil
-
-
-@dataclass(frozen=True)
-class Head:
-    """The subject's head: surfaces in the head frame, what to look at, named points."""
-
-    scalp: Surface
-    cortex: tuple[Surface, ...]
-    origin: str
-    landmarks: dict[str, FloatArray]
-    findings: tuple[Finding, ...]
 
 
 @dataclass(frozen=True)
@@ -124,110 +80,6 @@ class Planned:
             return "limit"
         names = ["scalp", *(keep_out.name for keep_out in self.source.protocol.reach.keep_out)]
         return names[index]
-
-
-def read_source(path: Path, inputs: Inputs) -> Source:
-    """Read a protocol, its lab file and its coil.
-
-    Raises
-    ------
-    InputError
-        Everything that is wrong, all at once.
-    """
-    _, data = inputs.open(str(path))
-    document = read_yaml(data, str(path))
-    protocol = parse_protocol(document)
-    problems: list[str] = []
-    lab, lab_path, coil = None, None, None
-    try:
-        lab, lab_path = _read_lab(protocol, document, path, inputs)
-    except InputError as error:
-        problems += error.lines
-    try:
-        coil = load_coil(protocol.coil, inputs, path, document.at(("coil",)))
-    except InputError as error:
-        problems += error.lines
-    if coil is not None and coil.file.windings:
-        try:
-            check_x_axis(coil)
-        except InputError as error:
-            problems += [f"{document.at(('coil',))}: {line}" for line in error.lines]
-    if problems or coil is None:
-        raise InputError(*problems)
-    return Source(path, document, protocol, lab, lab_path, coil)
-
-
-def _read_lab(protocol: Protocol, document: Document, path: Path, inputs: Inputs) -> tuple[LabFile | None, Path | None]:
-    if protocol.limits is None:
-        return None, None
-    lab_path, data = inputs.open(protocol.limits, path, document.at(("limits",)))
-    return parse_lab(read_yaml(data, str(lab_path))), lab_path
-
-
-def read_head(source: Source, inputs: Inputs) -> Head:
-    """Read the head's surfaces and landmarks into the head frame.
-
-    Raises
-    ------
-    InputError
-        Files that are missing, damaged, or no head in the declared unit.
-    """
-    spec = source.protocol.head
-    landmarks = _landmarks(spec, source, inputs)
-    if spec.phantom:
-        return Head(phantom_scalp(), (phantom_cortex(),), spec.origin or "surface", landmarks, ())
-    where = source.document.at(("head", "scalp"))
-    scalp = _surface(str(spec.scalp), spec, source, inputs, where)
-    _within(where, check_head_size, scalp, spec.unit)
-    _within(where, check_winding, scalp)
-    scalp, turned = outward(scalp)
-    _check_sphere_in_scalp(source, scalp)
-    cortex = tuple(
-        _surface(written, spec, source, inputs, source.document.at(("head", "cortex"))) for written in spec.cortex
-    )
-    return Head(scalp, cortex, str(spec.origin), landmarks, (*scalp.findings(), *turned))
-
-
-def _within(where: str, check: object, *args: object) -> object:
-    """Call a check and put the place in the file before what it says."""
-    try:
-        return check(*args)  # type: ignore[operator]  # any callable
-    except InputError as error:
-        raise InputError(*(f"{where}: {line}" for line in error.lines)) from None
-
-
-def _surface(written: str, spec: HeadSpec, source: Source, inputs: Inputs, where: str) -> Surface:
-    path, data = inputs.open(written, source.path, where)
-    try:
-        return parse_surface(data, path.name, axes=spec.axes, unit=spec.unit)
-    except InputError as error:
-        raise InputError(*(f"{where}: {line}" for line in error.lines)) from None
-
-
-def _landmarks(spec: HeadSpec, source: Source, inputs: Inputs) -> dict[str, FloatArray]:
-    if spec.landmarks is None:
-        return {}
-    path, data = inputs.open(spec.landmarks, source.path, source.document.at(("head", "landmarks")))
-    table = read_tsv(data, str(path), ("name", "x_mm", "y_mm", "z_mm"), exact=True)
-    points = np.stack([floats(table[c], str(path), c) for c in ("x_mm", "y_mm", "z_mm")], axis=1)
-    converted = points_to_ras_mm(points, axes=spec.axes, unit="mm")
-    if len(set(table["name"])) < len(table["name"]):
-        raise InputError(f"{path}: two landmarks have one name; names must be unique")
-    return dict(zip(table["name"], converted, strict=True))
-
-
-def read_targets(source: Source, inputs: Inputs) -> tuple[list[TargetSpec], list[str]]:
-    """Return the targets and the place of each, from the protocol's list or its table."""
-    listed = source.protocol.targets
-    if isinstance(listed, tuple):
-        return list(listed), [source.document.at(("targets", i)) for i in range(len(listed))]
-    path, data = inputs.open(listed, source.path, source.document.at(("targets",)))
-    targets, wheres = read_target_table(data, str(path))
-    names = [target.name for target in targets]
-    twice = [i for i, name in enumerate(names) if name in names[:i]]
-    if twice:
-        raise InputError(*(f"{wheres[i]}: {names[i]!r} is the name of two targets; rename one" for i in twice))
-    return targets, wheres
 
 
 def plan_poses(source: Source, inputs: Inputs) -> Planned:
@@ -350,18 +202,6 @@ def _spheres(source: Source, head: Head, at: FloatArray) -> Spheres:
     if given:
         return Spheres.given(given.centre_mm, given.radius_mm, len(at))
     return fit_spheres(head.scalp, at)
-
-
-def _check_sphere_in_scalp(source: Source, scalp: Surface) -> None:
-    given = source.protocol.head.sphere
-    if given is None:
-        return
-    inside = -float(scalp.signed_distance(np.array([given.centre_mm]))[0])
-    if not inside > SPHERE_CENTRE_MM:
-        raise InputError(
-            f"{source.document.at(('head', 'sphere'))}: its centre lies {inside:.0f} mm inside the scalp, expected at"
-            f" least {SPHERE_CENTRE_MM:g}; check the frame and unit of centre_mm"
-        )
 
 
 def _check_cortex_in_sphere(source: Source, head: Head) -> None:

@@ -18,8 +18,10 @@ from coilwright.geometry.pose_list import PoseList
 from coilwright.geometry.reach import Windows
 from coilwright.geometry.tables import Column, column_texts, json_bytes, sidecar_bytes, to_tsv
 
-from .planning import Planned, Source, read_source
-from .schedule import COLUMNS, Schedule, build_schedule, output_levels, read_schedule, write_schedule
+from .planning import Planned
+from .schedule import Schedule, build_schedule, output_levels
+from .schedule_table import COLUMNS, read_schedule, write_schedule
+from .sources import Source, read_source
 
 PLAN_FILE: Final = "plan.json"
 SCHEMA: Final = 1

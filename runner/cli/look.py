@@ -22,7 +22,7 @@ def targets_command(protocol: Path, *, json_: bool) -> None:
     Example: coilwright targets protocol.yaml
     """
     import numpy as np
-    from coilwright.runner.planning import read_head, read_source, read_targets
+    from coilwright.runner.sources import read_head, read_source, read_targets
 
     inputs = Inputs()
     source = read_source(protocol, inputs)

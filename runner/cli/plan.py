@@ -36,7 +36,8 @@ def init_command(folder: Path, *, force: bool) -> None:
 
 
 def _planned(protocol: Path) -> tuple[Any, Inputs]:
-    from coilwright.runner.planning import plan_poses, read_source
+    from coilwright.runner.planning import plan_poses
+    from coilwright.runner.sources import read_source
 
     inputs = Inputs()
     source = read_source(protocol, inputs)

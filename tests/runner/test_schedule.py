@@ -17,13 +17,11 @@ from coilwright.runner.schedule import (
     Schedule,
     build_schedule,
     milli,
-    percent_text,
-    read_schedule,
     rounded_down,
     theta_burst_offsets,
     train_offsets,
-    write_schedule,
 )
+from coilwright.runner.schedule_table import percent_text, read_schedule, write_schedule
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.stats import kstest
