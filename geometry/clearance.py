@@ -84,18 +84,20 @@ def least_distance(
         depth of a point inside, not of the deepest one.
     """
     best = np.full(count, above)
-    pending: list[tuple[Solid, FloatArray, IntArray]] = []
-    for solid in solids:
-        at_corners = solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1)
+    corners = [_least_at_corners(solid, triangles) for solid in solids]
+    for at_corners in corners:
         np.minimum.at(best, owner, at_corners)
-        pending.append((solid, at_corners, np.arange(len(triangles))))
     sides = triangles - triangles[:, [1, 2, 0]]
     slack = np.sqrt(dot(sides, sides).max(axis=1)) / _SQRT3
-    for solid, at_corners, _ in pending:
+    for solid, at_corners in zip(solids, corners, strict=True):
         keep = at_corners - slack < best[owner]
         _refine(solid, triangles[keep], owner[keep], best)
     best[best >= above] = np.inf
     return best
+
+
+def _least_at_corners(solid: Solid, triangles: FloatArray) -> FloatArray:
+    return np.asarray(solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1))
 
 
 def distance_bounds(solid: Solid, triangles: FloatArray) -> tuple[FloatArray, FloatArray]:
@@ -114,7 +116,7 @@ def _refine(solid: Solid, triangles: FloatArray, owner: IntArray, best: FloatArr
         np.minimum.at(best, owner, value)
         keep = (lowest < best[owner] - DISTANCE_TOLERANCE_MM) & (best[owner] >= 0)
         triangles, owner = split_in_four(triangles[keep]), np.tile(owner[keep], 4)
-        np.minimum.at(best, owner, solid.distance(triangles.reshape(-1, 3)).reshape(-1, 3).min(axis=1))
+        np.minimum.at(best, owner, _least_at_corners(solid, triangles))
     raise ArithmeticError("a distance did not converge")  # outside a solid each round halves the bounds at least
 
 
@@ -154,9 +156,18 @@ def near_triangles(
 
     Triangles that the bounding balls of all solids keep farther away than `within` are left out.
     """
-    if not np.isfinite(within):
-        local = _moved(poses, obstacle.triangles, np.repeat(np.arange(len(poses)), len(obstacle.triangles)), None)
-        return local, np.repeat(np.arange(len(poses)), len(obstacle.triangles))
+    total = len(obstacle.triangles)
+    if np.isfinite(within):
+        owner, face = np.divmod(_near_keys(poses, solids, obstacle, within), total)
+    else:
+        owner, face = np.divmod(np.arange(len(poses) * total), total)
+    inverse = invert_rigid(poses)[owner]
+    turned = np.einsum("kij,kcj->kci", inverse[:, :3, :3], obstacle.triangles[face])
+    return turned + inverse[:, None, :3, 3], owner
+
+
+def _near_keys(poses: FloatArray, solids: tuple[Solid, ...], obstacle: Obstacle, within: float) -> IntArray:
+    """Pose times the number of triangles plus triangle, of every pair that the bounding balls let come near."""
     bounds = [solid.bounds for solid in solids]
     centres = transform_points(poses[:, None], np.array([centre for centre, _ in bounds])[None])
     radii = np.array([radius for _, radius in bounds]) + within + obstacle.radius_mm
@@ -165,15 +176,7 @@ def near_triangles(
     for s, radius in enumerate(radii):
         lists = tree.query_ball_point(centres[:, s], radius + size, return_sorted=False)
         keys += [np.asarray(part, dtype=np.int64) + k * len(obstacle.triangles) for k, part in enumerate(lists)]
-    owner, face = np.divmod(np.unique(np.concatenate(keys)), len(obstacle.triangles))
-    return _moved(poses, obstacle.triangles, owner, face), owner
-
-
-def _moved(poses: FloatArray, triangles: FloatArray, owner: IntArray, face: IntArray | None) -> FloatArray:
-    """Triangles of the head frame in the coil frames of their owners."""
-    chosen = np.tile(triangles, (len(poses), 1, 1)) if face is None else triangles[face]
-    inverse = invert_rigid(poses)[owner]
-    return np.asarray(np.einsum("kij,kcj->kci", inverse[:, :3, :3], chosen) + inverse[:, None, :3, 3])
+    return np.unique(np.concatenate(keys))
 
 
 @dataclass(frozen=True)

@@ -55,7 +55,7 @@ def number_text(value: float) -> str:
 def column_texts(values: Iterable[Any]) -> list[str]:
     """Return the cells of a column as text; refuses text that would break the table."""
     if isinstance(values, np.ndarray) and values.dtype.kind == "f":
-        return [MISSING if math.isnan(v) else repr(v + 0.0) for v in values.tolist()]
+        return list(map(number_text, values.tolist()))
     return [check_cell(str(v)) for v in values]
 
 

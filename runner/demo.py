@@ -9,7 +9,7 @@ from pathlib import Path
 from coilwright.geometry.files import Inputs, write_files
 
 from .dry_run import dry_run, load_plan
-from .exporting import export_files
+from .exporting import export
 from .planning import Planned, plan_poses
 from .plans import POSE_FILES, plan_files, plan_schedule
 from .rehearsal import Rehearsal
@@ -51,6 +51,6 @@ def run_demo(folder: Path, template: Mapping[str, bytes], *, force: bool) -> Dem
     paths += [path for path in plan if path.parent == folder / "plan"]
     for to_format, name in (("tsv", "poses.tsv"), ("matrices", "poses.json")):
         target = folder / "export" / to_format / name
-        exported = export_files(folder / "poses" / "poses.tsv", to_format, target.name)
-        paths += write_files(target.parent, exported, force=force)
+        exported = export(folder / "poses" / "poses.tsv", to_format, target.name)
+        paths += write_files(target.parent, exported.files, force=force)
     return DemoResult(planned, dry_run(load_plan(folder / "plan")), tuple(paths))

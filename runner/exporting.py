@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
 from pathlib import Path, PurePath
 from typing import Final
 
@@ -25,15 +26,27 @@ def read_poses(path: Path, from_format: str = "tsv") -> PoseList:
     InputError
         A file that is missing, damaged, or of another kind.
     """
-    data = read_bytes(path)
+    return _parsed(path, read_bytes(path), from_format)
+
+
+def _parsed(path: Path, data: bytes, from_format: str) -> PoseList:
     if from_format == "matrices":
         return matrices.read(data, str(path))
     beside = path.with_suffix(".json")
     return tsv.read(data, str(path), read_bytes(beside) if beside.exists() and beside != path else None)
 
 
-def export_files(path: Path, to_format: str, name: str, *, unchecked: bool = False) -> dict[str, bytes]:
-    """Return the files of an export: the poses that can be reached, and the receipt.
+@dataclass(frozen=True)
+class Export:
+    """An export before it is written: its files by name, how many poses are in it, which were left out and why."""
+
+    files: dict[str, bytes]
+    poses: int
+    left_out: dict[str, str]
+
+
+def export(path: Path, to_format: str, name: str, *, unchecked: bool = False) -> Export:
+    """Make an export: the poses that can be reached, and the receipt. What is hashed is what was parsed.
 
     Parameters
     ----------
@@ -50,7 +63,8 @@ def export_files(path: Path, to_format: str, name: str, *, unchecked: bool = Fal
     InputError
         A pose whose reach is not known, no pose left to write, a name whose sidecar would replace the export itself.
     """
-    poses = read_poses(path)
+    data = read_bytes(path)
+    poses = _parsed(path, data, "tsv")
     cells = poses.columns.get("reachable", ["n/a"] * len(poses.names))
     keep = [cell != "no" for cell in cells] if unchecked else poses.reachable()
     reasons = poses.columns.get("reason", ["n/a"] * len(poses.names))
@@ -66,7 +80,7 @@ def export_files(path: Path, to_format: str, name: str, *, unchecked: bool = Fal
         name,
         to_format=to_format,
         conventions=CONVENTIONS[to_format],
-        pose_list_sha256=sha256(read_bytes(path)),
+        pose_list_sha256=sha256(data),
         left_out=left_out,
     )
-    return written | note
+    return Export(written | note, len(chosen.names), left_out)

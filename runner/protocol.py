@@ -7,7 +7,9 @@ from typing import Annotated, Any, Literal
 
 from coilwright.geometry.documents import AlsoAccepts, Document, Model, NumberOrPair, Vector3, Version, validate
 from coilwright.geometry.errors import InputError
+from coilwright.geometry.frames import Axes, Unit
 from coilwright.geometry.names import Name
+from coilwright.geometry.pose_list import Origin
 from coilwright.geometry.targets import TargetSpec
 from pydantic import BeforeValidator, Discriminator, Field, Tag, field_validator, model_validator
 
@@ -43,9 +45,9 @@ class HeadSpec(Model):
 
     scalp: str | None = None
     phantom: bool = False
-    unit: Literal["m", "cm", "mm"] = "mm"
-    axes: Literal["RAS", "LPS"] = "RAS"
-    origin: Literal["scanner", "surface", "template", "landmarks"] | None = None
+    unit: Unit = "mm"
+    axes: Axes = "RAS"
+    origin: Origin | None = None
     cortex: Annotated[
         tuple[str, ...],
         BeforeValidator(_one_or_many),

@@ -15,6 +15,7 @@ from coilwright.geometry.draws import Draws
 from coilwright.geometry.errors import InputError
 from coilwright.geometry.frames import FloatArray, IntArray
 
+from .limits import published
 from .orders import Constraints, order_entries, sham_entries
 from .protocol import Protocol
 
@@ -210,8 +211,6 @@ def theta_burst_offsets(pattern: str) -> tuple[IntArray, IntArray]:
     >>> [int(theta_burst_offsets(f"{kind}_theta_burst")[0][-1]) for kind in ("intermittent", "continuous")]
     [191840000, 39840000]
     """
-    from .limits import published
-
     values = published()["theta_burst"]
     within, every = int(values["within_burst_ms"]) * 1000, int(values["burst_every_ms"]) * 1000
     burst = np.arange(values["pulses_per_burst"]) * within
@@ -256,8 +255,6 @@ def _gaps(protocol: Protocol, count: int, offsets: IntArray) -> IntArray:
     if pulses.train:
         step = int(offsets[-1]) + _microseconds(pulses.train.pause_s, "pulses.train.pause_s")
     else:
-        from .limits import published
-
         every = int(published()["theta_burst"]["intermittent"]["every_s"]) * US
         step = (int(offsets[-1]) // every + 1) * every
     return np.full(count, step, dtype=np.int64)

@@ -163,9 +163,14 @@ def train_rate(case: Case) -> Check:
     if faster(rates[at], limit):
         approval = _approval(case, "train_rate", trains)
         limit = max(limit, approval.up_to) if approval else limit
-    item = at_most("train_rate", float(rates[at]), limit, pulse=pulse_number(trains.first[at]))
-    if item.verdict == "exceeded" and not faster(rates[at], limit):
-        item = item.but(verdict="within")
+    item = check(
+        "train_rate",
+        "exceeded" if faster(rates[at], limit) else "within",
+        limit=limit,
+        worst=float(rates[at]),
+        margin=limit - float(rates[at]),
+        pulse=pulse_number(trains.first[at]),
+    )
     return with_approval(case, item, approval)
 
 

@@ -64,17 +64,15 @@ def find_trains(schedule: Schedule, pattern: str | None) -> Trains:
     pattern : str or None
         The theta burst pattern that the protocol names.
     """
-    found = published()["trains_found"]
-    tolerance = float(found["relative_tolerance"])
     onset, train = schedule.onset_us, schedule.train
     joined = np.diff(onset) <= train_gap_us()
     renumbered = train[1:] != train[:-1]
-    joined |= (train[1:] == train[:-1]) & (train[1:] != NO_TRAIN)
+    joined |= ~renumbered & (train[1:] != NO_TRAIN)
     starts = np.flatnonzero(np.concatenate([[True], ~joined]))
     ends = np.append(starts[1:], len(onset)) - 1
     keep = (ends > starts) | (train[starts] != NO_TRAIN)
     first, last = starts[keep], ends[keep]
-    rate, duration = _rates(schedule, first, last, joined, tolerance)
+    rate, duration = _rates(schedule, first, last)
     burst = np.array(
         [
             pattern is not None and is_theta_burst(schedule, int(a), int(b), pattern)
@@ -89,11 +87,10 @@ def find_trains(schedule: Schedule, pattern: str | None) -> Trains:
     return Trains(first, last, parts, last - first + 1, rate, highest, duration, burst.astype(bool))
 
 
-def _rates(
-    schedule: Schedule, first: IntArray, last: IntArray, joined: np.ndarray, tolerance: float
-) -> tuple[FloatArray, FloatArray]:
+def _rates(schedule: Schedule, first: IntArray, last: IntArray) -> tuple[FloatArray, FloatArray]:
+    tolerance = float(published()["trains_found"]["relative_tolerance"])
     onset = schedule.onset_us
-    gaps = np.where(joined, np.diff(onset), np.iinfo(np.int64).max) if len(onset) > 1 else np.empty(0, dtype=np.int64)
+    gaps = np.diff(onset)
     rate = np.full(len(first), np.nan)
     for i, (a, b) in enumerate(zip(first.tolist(), last.tolist(), strict=True)):
         if b == a:

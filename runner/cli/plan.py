@@ -150,12 +150,11 @@ def print_rehearsal(rehearsal: Any) -> None:
             show.number(c.worst),
             show.number(c.limit),
             show.number(c.margin),
-            c.unit or "-",
+            (c.unit or "-").replace("% of ", "% "),
             f"{c.pulse or '-'}",
         )
         for c in rehearsal.checks
     ]
-    rows = [(*row[:5], row[5].replace("% of ", "% "), row[6]) for row in rows]
     show.table(("rule", "verdict", "worst", "limit", "margin", "unit", "pulse"), rows, right=(2, 3, 4, 6))
     click.echo("")
     idle = [item.rule for item in rehearsal.checks if item.verdict == "within" and item.worst is None and item.note]

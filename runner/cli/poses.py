@@ -27,15 +27,14 @@ def export_command(poses: Path, to_format: str, output: Path, *, unchecked: bool
 
     Example: coilwright export plan/poses.tsv --to matrices -o rig.json
     """
-    from coilwright.runner.exporting import export_files, read_poses
+    from coilwright.runner.exporting import export
 
-    paths = write_files(output.parent, export_files(poses, to_format, output.name, unchecked=unchecked), force=force)
-    total = len(read_poses(poses).names)
-    kept = len(read_poses(output, to_format).names)
+    made = export(poses, to_format, output.name, unchecked=unchecked)
+    paths = write_files(output.parent, made.files, force=force)
     if json_:
-        show.as_json({"poses": kept, "left_out": total - kept, "files": [str(path) for path in paths]})
+        show.as_json({"poses": made.poses, "left_out": len(made.left_out), "files": [str(path) for path in paths]})
         return
-    click.echo(f"{kept} poses written, {total - kept} left out because they cannot be reached")
+    click.echo(f"{made.poses} poses written, {len(made.left_out)} left out because they cannot be reached")
     show.written(paths)
 
 
