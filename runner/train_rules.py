@@ -213,13 +213,13 @@ def theta_burst(case: Case) -> Check:
     most_percent, most_pulses, approval = float(values["most_percent"]), float(values["most_pulses"]), None
     if percent is None:  # too many pulses at any intensity: no missing threshold hides that
         return with_approval(case, at_most("theta_burst", float(pulses), most_pulses, pulse=pulse, unit="pulses"), None)
-    if percent > most_percent * MILLI or pulses > most_pulses or _close_bursts(case, bursts):
+    close = _close_bursts(case, bursts)
+    if close is not None:  # an approval speaks of intensity and count, not of the rhythm: none covers this
+        return close
+    if percent > most_percent * MILLI or pulses > most_pulses:
         approval = case.approvals.find("theta_burst", percent=percent / MILLI, pattern=pattern)
     if approval and approval.threshold_percent is not None:
         most_percent, most_pulses = max(most_percent, approval.threshold_percent), max(most_pulses, approval.up_to)
-    close = _close_bursts(case, bursts)
-    if close is not None and approval is None:
-        return close
     by_percent = at_most("theta_burst", percent / MILLI, most_percent, pulse=pulse)
     by_pulses = at_most("theta_burst", float(pulses), most_pulses, pulse=pulse, unit="pulses")
     item = by_pulses if pulses / most_pulses > percent / MILLI / most_percent else by_percent

@@ -132,6 +132,22 @@ def test_theta_burst_trains_come_no_sooner_than_described(
     assert cli("dry-run", study.protocol, "--schedule", by_hand).code == code
 
 
+def test_an_approval_of_intensity_does_not_excuse_the_rhythm(study: Study, cli: Cli) -> None:
+    approval = {"rule": "theta_burst", "pattern": "intermittent_theta_burst", "threshold_percent": 90, "up_to": 1200}
+    signed = {"reference": "EC 1", "approved_by": "physician", "until": "2099-12-31"}
+    study.write(
+        {
+            "threshold": {"output_percent": 50, "kind": "active", "method": "emg"},
+            "pulses": {"threshold_percent": [80], "pattern": "intermittent_theta_burst"},
+        },
+        {"approvals": [approval | signed]},
+    )
+    by_hand = study.folder / "s.tsv"
+    for every, code in ((10.0, 0), (7.0, 10)):
+        by_hand.write_text(theta([i * every for i in range(20)], 10))
+        assert cli("dry-run", study.protocol, "--schedule", by_hand).code == code
+
+
 def test_a_plan_that_records_no_hashes_is_no_plan(study: Study, cli: Cli) -> None:
     plan = study.folder / "plan"
     cli("schedule", study.protocol, "-o", plan)
